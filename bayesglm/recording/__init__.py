@@ -1,0 +1,1 @@
+"""What was measured: recordings, the study they belong to, spikes, selection and quality."""
