@@ -14,76 +14,97 @@ from pydantic import BaseModel, ConfigDict, Field, model_validator
 class Section(BaseModel):
     """A section of the study file: immutable, and closed to unknown keys."""
 
-    model_config = ConfigDict(extra="forbid", frozen=True, populate_by_name=True)
+    model_config = ConfigDict(
+        extra="forbid", frozen=True, populate_by_name=True, allow_inf_nan=False
+    )
 
 
 class StudySection(Section):
     """What the study is called."""
 
-    name: str = Field("study", description="name shown in the report")
-    notes: str = Field("", description="free text shown in the report")
+    name: str = Field(default="study", description="name shown in the report")
+    notes: str = Field(default="", description="free text shown in the report")
 
 
 class RowSelection(Section):
     """Ranges that mask single rows; the current of a masked row still acts afterwards."""
 
-    current: str | None = Field(None, description="range of current, such as -100:25pA")
-    voltage: str | None = Field(None, description="range of voltage, such as -90:-40mV")
+    current: str | None = Field(default=None, description="range of current, such as -100:25pA")
+    voltage: str | None = Field(default=None, description="range of voltage, such as -90:-40mV")
 
 
 class SelectSection(Section):
     """What part of a recording is fitted; everything stated must hold."""
 
-    sweeps: str | None = Field(None, description="numbers of the sweeps used, such as 0-4,7")
-    current: str | None = Field(
-        None, description="sweeps all of whose current lies in a range, such as -100:25pA"
+    sweeps: str | None = Field(
+        default=None, description="numbers of the sweeps used, such as 0-4,7"
     )
-    rate: str | None = Field(None, description="sweeps with a firing rate in a range: 0:5Hz")
-    window: str | None = Field(None, description="time in the sweep that is used: 100:2400ms")
-    rows: RowSelection = Field(RowSelection(), description="ranges that mask single rows")
+    current: str | None = Field(
+        default=None, description="sweeps all of whose current lies in a range, such as -100:25pA"
+    )
+    rate: str | None = Field(
+        default=None, description="sweeps with a firing rate in a range: 0:5Hz"
+    )
+    window: str | None = Field(
+        default=None, description="time in the sweep that is used: 100:2400ms"
+    )
+    rows: RowSelection = Field(default=RowSelection(), description="ranges that mask single rows")
 
 
 class RecordingSection(Section):
     """What the file cannot tell; blanks are shown to the author, never guessed."""
 
-    holding_pA: float | None = Field(None, description="holding current, pA")
+    holding_pA: float | None = Field(default=None, description="holding current, pA")
     holding_included: bool | None = Field(
-        None, description="whether the recorded current includes the holding current"
+        default=None, description="whether the recorded current includes the holding current"
     )
-    junction_potential_mV: float | None = Field(None, description="liquid junction potential, mV")
+    junction_potential_mV: float | None = Field(
+        default=None, description="liquid junction potential, mV"
+    )
     junction_potential_applied: bool | None = Field(
-        None, description="whether the voltages are corrected for it already (V_true = V_rec − LJP)"
+        default=None,
+        description="whether the voltages are corrected for it already (V_true = V_rec − LJP)",
     )
-    bridge_MOhm: float | None = Field(None, description="bridge balance, MΩ")
-    bridge_compensated: bool | None = Field(None, description="whether the bridge was balanced")
-    temperature_C: float | None = Field(None, description="temperature of the bath, °C")
-    lowpass_Hz: float | None = Field(None, description="corner of the recording filter, Hz")
-    synaptic_blockers: str | None = Field(None, description="blockers in the bath, in words")
-    internal_solution: str | None = Field(None, description="pipette solution, in words")
-    spike_height_mV: float = Field(-10.0, description="a spike's peak exceeds this voltage, mV")
+    bridge_MOhm: float | None = Field(default=None, description="bridge balance, MΩ")
+    bridge_compensated: bool | None = Field(
+        default=None, description="whether the bridge was balanced"
+    )
+    temperature_C: float | None = Field(default=None, description="temperature of the bath, °C")
+    lowpass_Hz: float | None = Field(default=None, description="corner of the recording filter, Hz")
+    synaptic_blockers: str | None = Field(
+        default=None, description="blockers in the bath, in words"
+    )
+    internal_solution: str | None = Field(default=None, description="pipette solution, in words")
+    spike_height_mV: float = Field(
+        default=-10.0, description="a spike's peak exceeds this voltage, mV"
+    )
     spike_slope_mV_per_ms: float = Field(
-        10.0, gt=0, description="and its rise is at least this steep, mV/ms"
+        default=10.0, gt=0, description="and its rise is at least this steep, mV/ms"
     )
     spike_dead_time_ms: float = Field(
-        1.0, gt=0, description="of two peaks closer than this only the higher is a spike, ms"
+        default=1.0,
+        gt=0,
+        description="of two peaks closer than this only the higher is a spike, ms",
     )
     spike_moment: Literal["crossing", "peak"] = Field(
-        "crossing",
+        default="crossing",
         description="the spike's time: the first sample at or above spike_height_mV on the rise, "
         "or the peak",
     )
-    select: SelectSection = Field(SelectSection(), description="what part is fitted")
+    select: SelectSection = Field(default=SelectSection(), description="what part is fitted")
 
 
 class KernelSection(Section):
     """Shape of a kernel: its duration and the B-splines it is made of."""
 
     duration_ms: float | None = Field(
-        None, gt=0, description="duration of the kernel, ms; default from the data"
+        default=None, gt=0, description="duration of the kernel, ms; default from the data"
     )
-    weights: int = Field(14, ge=5, le=60, description="number of B-spline weights")
+    weights: int = Field(default=14, ge=5, le=60, description="number of B-spline weights")
     warp_ms: float = Field(
-        2.0, gt=0, description="knots are even in log(1 + lag/warp_ms): the smaller, the finer early"
+        default=2.0,
+        gt=0,
+        description="knots are even in log(1 + lag/warp_ms): smaller is finer early",
     )
 
 
@@ -91,7 +112,7 @@ class AfterSpikeSection(KernelSection):
     """Shape of the after-spike kernel and the lags reported in the table of features."""
 
     report_at_ms: tuple[float, ...] = Field(
-        (30.0,), description="lags after a spike at which the kernel is reported, ms"
+        default=(30.0,), description="lags after a spike at which the kernel is reported, ms"
     )
 
 
@@ -99,51 +120,55 @@ class ElectrodeSection(Section):
     """The electrode's own drop of voltage, a nuisance."""
 
     include: bool = Field(
-        True, description="fit a term in the current of the same bin (unbalanced bridge)"
+        default=True, description="fit a term in the current of the same bin (unbalanced bridge)"
     )
 
 
 class KernelsSection(Section):
     """The kernels."""
 
-    input: KernelSection = Field(KernelSection(), description="input kernel κ")
+    input: KernelSection = Field(default=KernelSection(), description="input kernel κ")
     after_spike: AfterSpikeSection = Field(
-        AfterSpikeSection(), description="after-spike kernel η"
+        default=AfterSpikeSection(), description="after-spike kernel η"
     )
-    electrode: ElectrodeSection = Field(ElectrodeSection(), description="electrode term")
+    electrode: ElectrodeSection = Field(default=ElectrodeSection(), description="electrode term")
 
 
 class ModelSection(Section):
     """Likelihood and what it rests on."""
 
-    observe: Literal["voltage"] = Field("voltage", description="what is fitted")
+    observe: Literal["voltage"] = Field(default="voltage", description="what is fitted")
     noise: Literal["calibrated", "white"] = Field(
-        "calibrated",
+        default="calibrated",
         description="calibrated by the variation between independent units, or white: bands that "
         "are several times too narrow on real cells, for comparison only",
     )
     row_ms: float | None = Field(
-        None,
+        default=None,
         gt=0,
         description="voltage is averaged over rows of this length, ms; default the smallest whole "
         "multiple of the step that is at least 0.5 ms",
     )
     spike_window_ms: tuple[float, float] = Field(
-        (-1.0, 5.0), description="rows in this window around each spike are left out, ms"
+        default=(-1.0, 5.0), description="rows in this window around each spike are left out, ms"
     )
-    sweep_offsets: bool = Field(True, description="each sweep has an offset of its own")
+    sweep_offsets: bool = Field(default=True, description="each sweep has an offset of its own")
     units: Literal["auto", "sweep", "block"] = Field(
-        "auto", description="what counts as an independent unit"
+        default="auto", description="what counts as an independent unit"
     )
     block_ms: float | None = Field(
-        None, gt=0, description="length of a block where units are blocks, ms; default from the data"
+        default=None,
+        gt=0,
+        description="length of a block where units are blocks, ms; default from data",
     )
 
     @model_validator(mode="after")
     def _window_is_ordered(self) -> ModelSection:
         before, after = self.spike_window_ms
         if not before <= 0 < after:
-            raise ValueError(f"spike_window_ms is [{before:g}, {after:g}]; expected [≤ 0, > 0] in ms")
+            raise ValueError(
+                f"spike_window_ms is [{before:g}, {after:g}]; expected [≤ 0, > 0] in ms"
+            )
         return self
 
 
@@ -151,25 +176,27 @@ class PriorsSection(Section):
     """Priors in the units of what they describe; each is a row of the report's table."""
 
     input_sd: float = Field(
-        20.0, gt=0, description="scale of the half-normal prior of the sd of κ, MΩ/ms"
+        default=20.0, gt=0, description="scale of the half-normal prior of the sd of κ, MΩ/ms"
     )
     after_spike_sd: float = Field(
-        10.0, gt=0, description="scale of the half-normal prior of the sd of η, mV"
+        default=10.0, gt=0, description="scale of the half-normal prior of the sd of η, mV"
     )
-    offset_mean: float = Field(-65.0, description="prior mean of the offset, mV")
-    offset_sd: float = Field(20.0, gt=0, description="prior sd of the offset, mV")
-    electrode_sd: float = Field(50.0, gt=0, description="prior sd of the electrode term, MΩ")
+    offset_mean: float = Field(default=-65.0, description="prior mean of the offset, mV")
+    offset_sd: float = Field(default=20.0, gt=0, description="prior sd of the offset, mV")
+    electrode_sd: float = Field(
+        default=50.0, gt=0, description="prior sd of the electrode term, MΩ"
+    )
 
 
 class SamplingSection(Section):
     """The sampler and the intervals."""
 
-    chains: int = Field(4, ge=2, description="number of chains")
-    warmup: int = Field(300, ge=50, description="warm-up steps a chain")
-    draws: int = Field(500, ge=50, description="kept draws a chain")
-    target_accept: float = Field(0.8, gt=0.5, lt=1, description="target acceptance of NUTS")
-    seed: int = Field(0, ge=0, description="seed of everything random")
-    level: float = Field(0.9, gt=0, lt=1, description="level of every interval and band")
+    chains: int = Field(default=4, ge=2, description="number of chains")
+    warmup: int = Field(default=300, ge=50, description="warm-up steps a chain")
+    draws: int = Field(default=500, ge=50, description="kept draws a chain")
+    target_accept: float = Field(default=0.8, gt=0.5, lt=1, description="target acceptance of NUTS")
+    seed: int = Field(default=0, ge=0, description="seed of everything random")
+    level: float = Field(default=0.9, gt=0, lt=1, description="level of every interval and band")
 
 
 class Settings(Section):

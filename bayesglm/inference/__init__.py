@@ -1,0 +1,1 @@
+"""Sampling, diagnosis and results."""

@@ -1,0 +1,343 @@
+"""Least squares on a digest, and what its error really is.
+
+The estimate is ordinary least squares (with sweep offsets taken out). Its covariance is not
+``σ²H⁻¹``: the residual of a cell is correlated and holds the cell's nonlinearity. It is
+estimated from how much the estimate changes when independent units are left out, shrunk
+towards what the residual's own spectrum predicts:
+
+    V = (B·V_jack + K·D V0 D) / (B + K)
+
+with B units and K weights. V_jack is the delete-one-unit jackknife; ``V0 = H⁻¹ Σ_f S_f C_f H⁻¹``
+is the least-squares sandwich under a residual of spectrum S (C_f the Gram matrix of band f);
+``D² = max(1, tr(V0⁻¹V_jack)/K_kernel)`` scales it kernel by kernel. Sources: Künsch (1989, Ann
+Statist 17:1217–1241) for blocks, Cameron, Gelbach & Miller (2011, J Bus Econ Stat 29:238–249)
+for clusters, Müller (2013, Econometrica 81:1805–1849) for posteriors built on a sandwich, Bell &
+McCaffrey (2002, Survey Methodology 28:169–181) for the degrees of freedom.
+
+All of it happens in whitened coordinates z, ``w = M z`` with ``MᵀHM = I``, on the directions that
+the recording excites.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from bayesglm.kernels.design import VoltageDesign
+from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.offsets import marginalise, reml_ratio, sweep_sums
+from bayesglm.recording.recording import FloatArray
+
+#: Directions with less than this share of the largest information count as never excited.
+RANK_TOLERANCE = 1e-10
+
+#: Of a direction that one unit carries to more than this share, leaving it out tells nothing.
+_MAX_LEVERAGE = 0.5
+
+#: A band's residual keeps at least this share of its freedom, however much the fit takes.
+_MIN_FREE_SHARE = 0.1
+
+
+@dataclass(frozen=True, eq=False)
+class LeastSquares:
+    """Least squares on a digest, in whitened coordinates.
+
+    Attributes
+    ----------
+    weights
+        Estimate ŵ, shape (P,); zero along directions never excited.
+    basis
+        M, shape (P, K): ``w = M z``, ``MᵀHM = I``.
+    residual_variance
+        Residual variance σ̂² of the rows, mV².
+    offset_ratio
+        ρ, variance of the sweep offsets in units of σ̂².
+    lost
+        Directions of the weights that the recording never excites, shape (P, P − K).
+    """
+
+    weights: FloatArray
+    basis: FloatArray
+    residual_variance: float
+    offset_ratio: float
+    lost: FloatArray
+
+    @property
+    def rank(self) -> int:
+        """Number of directions that are excited, K."""
+        return self.basis.shape[1]
+
+    @property
+    def white_covariance(self) -> FloatArray:
+        """Covariance of ŵ if residuals were white, shape (P, P)."""
+        return self.residual_variance * self.basis @ self.basis.T
+
+
+@dataclass(frozen=True, eq=False)
+class Calibration:
+    """The estimate with its calibrated covariance.
+
+    Attributes
+    ----------
+    fit
+        The least-squares estimate.
+    covariance
+        V in whitened coordinates, shape (K, K).
+    jackknife, spectral
+        V_jack and V0 in whitened coordinates, shape (K, K).
+    inflation
+        D of each kernel: sd between units over sd from the residual's spectrum.
+    spectrum
+        Residual spectrum by band, as variance of white noise of that level, mV², shape (F,).
+    freedom
+        ν, the smallest Satterthwaite degrees of freedom of the reported scalars.
+    leverage
+        Largest share of any direction that each unit carries, shape (B,).
+    """
+
+    fit: LeastSquares
+    covariance: FloatArray
+    jackknife: FloatArray
+    spectral: FloatArray
+    inflation: dict[str, float]
+    spectrum: FloatArray
+    freedom: float
+    leverage: FloatArray
+
+    @property
+    def precision(self) -> FloatArray:
+        """Precision of the weights, shape (P, P); zero along directions never excited."""
+        back = np.linalg.pinv(self.fit.basis)
+        inner: FloatArray = back.T @ np.linalg.inv(self.covariance) @ back
+        return (inner + inner.T) / 2
+
+    @property
+    def white_precision(self) -> FloatArray:
+        """Precision of the weights if residuals were white, shape (P, P)."""
+        back = np.linalg.pinv(self.fit.basis)
+        inner: FloatArray = back.T @ back / self.fit.residual_variance
+        return (inner + inner.T) / 2
+
+
+def column_scale(digest: VoltageDigest) -> FloatArray:
+    """Scale of the weights from the columns alone, 1/norm of each, shape (P, P)."""
+    norms = np.sqrt(np.diagonal(digest.gram.sum(axis=0))[:-1])
+    return np.diag(1.0 / np.where(norms > 0, norms, 1.0))
+
+
+def least_squares(
+    digest: VoltageDigest,
+    scale: FloatArray,
+    offset_ratio: float | None = 0.0,
+    tolerance: float = RANK_TOLERANCE,
+) -> LeastSquares:
+    """Least squares on the directions that the recording excites.
+
+    Parameters
+    ----------
+    digest
+        The digest.
+    scale
+        Scale of the weights, shape (P, P): a square root of the prior covariance, or
+        `column_scale`. What counts as "never excited" is judged after scaling.
+    offset_ratio
+        ρ of the sweep offsets; None estimates it by REML.
+    tolerance
+        Directions with less than this share of the largest information are left out.
+
+    Returns
+    -------
+    LeastSquares
+    """
+    sums = sweep_sums(digest.gram, digest.sweep)
+    if offset_ratio is None:
+        offset_ratio = reml_ratio(sums, scale, tolerance)
+    total = marginalise(sums, offset_ratio).sum(axis=0)
+    eigenvalues, vectors = np.linalg.eigh(scale.T @ total[:-1, :-1] @ scale)
+    kept = eigenvalues > tolerance * eigenvalues[-1]
+    basis = scale @ vectors[:, kept] / np.sqrt(eigenvalues[kept])
+    z = basis.T @ total[:-1, -1]
+    freedom = max(digest.n_rows - basis.shape[1], 1.0)
+    return LeastSquares(
+        weights=basis @ z,
+        basis=basis,
+        residual_variance=max(float(total[-1, -1] - z @ z), 0.0) / freedom,
+        offset_ratio=offset_ratio,
+        lost=scale @ vectors[:, ~kept],
+    )
+
+
+def unit_scores(digest: VoltageDigest, fit: LeastSquares) -> FloatArray:
+    """Scores ``s_b = Σ_{rows of b} x (v − xᵀŵ − ê_s)`` in whitened coordinates, shape (B, K)."""
+    residual = _residual_vectors(digest, fit)
+    scores: FloatArray = np.einsum("pk,bpq,bq->bk", fit.basis, digest.gram[:, :-1, :], residual)
+    return scores
+
+
+def sandwich(digest: VoltageDigest, fit: LeastSquares) -> FloatArray:
+    """Cluster-robust covariance ``H⁻¹ (Σ_b s_b s_bᵀ) H⁻¹`` of ŵ, uncorrected, shape (P, P)."""
+    scores = unit_scores(digest, fit) @ fit.basis.T
+    return scores.T @ scores
+
+
+def calibrate(
+    digest: VoltageDigest,
+    fit: LeastSquares,
+    contrasts: FloatArray,
+    inflation: dict[str, float] | None = None,
+) -> Calibration:
+    """Calibrate the covariance of a least-squares estimate.
+
+    Parameters
+    ----------
+    digest
+        The digest `fit` was made from; at least two units.
+    fit
+        The estimate.
+    contrasts
+        Reported scalars as combinations of the weights, shape (C, P); they set ν.
+    inflation
+        D of each kernel, taken from a larger digest. Given it, V is ``D V0 D`` alone: a few
+        units tell too little of their own spread.
+
+    Returns
+    -------
+    Calibration
+    """
+    shares, changes = _leave_one_out(digest, fit)
+    between = _between_sweeps(digest, fit)
+    n_units, rank = digest.n_units, fit.rank
+    jackknife = (n_units - 1) / n_units * changes.T @ changes + between[1]
+    spectral, spectrum = _spectral_covariance(digest, fit)
+    spectral = spectral + between[0]
+    if inflation is None:
+        inflation = _kernel_inflation(digest.design, fit, jackknife, spectral)
+        target = _inflated(digest.design, fit, spectral, inflation)
+        covariance = (n_units * jackknife + rank * target) / (n_units + rank)
+    else:
+        covariance = _inflated(digest.design, fit, spectral, inflation)
+    return Calibration(
+        fit=fit,
+        covariance=(covariance + covariance.T) / 2,
+        jackknife=jackknife,
+        spectral=spectral,
+        inflation=inflation,
+        spectrum=spectrum,
+        freedom=_satterthwaite(shares, contrasts @ fit.basis),
+        leverage=np.linalg.eigvalsh(shares)[:, -1],
+    )
+
+
+def _residual_vectors(digest: VoltageDigest, fit: LeastSquares) -> FloatArray:
+    """Vectors a with ``zᵀa`` the residual of a row z = (x, v), sweep offset removed, (B, P + 1)."""
+    sums = sweep_sums(digest.gram, digest.sweep)
+    plain = np.append(-fit.weights, 1.0)
+    shrink = fit.offset_ratio / (1.0 + fit.offset_ratio * sums[:, 0, 0])
+    offsets = shrink * (sums[:, 0, :] @ plain)
+    vectors = np.tile(plain, (digest.n_units, 1))
+    vectors[:, 0] -= offsets[digest.sweep]
+    return vectors
+
+
+def _leave_one_out(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArray, FloatArray]:
+    """Share of the information each unit carries, (B, K, K), and ẑ − ẑ without it, (B, K).
+
+    Leaving a block out of a sweep leaves the rest of that sweep, with an offset of its own.
+    """
+    sums = sweep_sums(digest.gram, digest.sweep)[digest.sweep]
+    lost = marginalise(sums, fit.offset_ratio) - marginalise(sums - digest.gram, fit.offset_ratio)
+    shares = np.einsum("pk,bpq,ql->bkl", fit.basis, lost[:, :-1, :-1], fit.basis)
+    plain = np.append(-fit.weights, 1.0)
+    scores = np.einsum("pk,bpq,q->bk", fit.basis, lost[:, :-1, :], plain)
+    values, vectors = np.linalg.eigh(shares)
+    # Where one unit carries nearly all, the rest says nothing and the change would be noise
+    # over nothing; the spectral part then speaks for that direction.
+    factor = 1.0 / (1.0 - np.clip(values, 0.0, _MAX_LEVERAGE))
+    changes = np.einsum("bkj,bj,blj,bl->bk", vectors, factor, vectors, scores)
+    return shares, changes
+
+
+def _between_sweeps(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArray, FloatArray]:
+    """What the spread of sweep offsets adds to the covariance: of all sweeps, of cut ones.
+
+    A jackknife over whole sweeps sees their offsets vary; one over blocks of a sweep does not.
+    """
+    sums = sweep_sums(digest.gram, digest.sweep)
+    weight = 1.0 / (1.0 + fit.offset_ratio * sums[:, 0, 0])
+    pull = weight[:, None] * sums[:, 0, :-1] @ fit.basis
+    variance = fit.offset_ratio * fit.residual_variance
+    cut = np.bincount(digest.sweep, minlength=len(sums)) > 1
+    return variance * pull.T @ pull, variance * pull[cut].T @ pull[cut]
+
+
+def _spectral_covariance(
+    digest: VoltageDigest, fit: LeastSquares
+) -> tuple[FloatArray, FloatArray]:
+    """V0 within sweeps, (K, K), and the residual spectrum, (F,)."""
+    residual = _residual_vectors(digest, fit)
+    power = np.einsum("bi,bfij,bj->f", residual, digest.bands, residual)
+    sums = sweep_sums(digest.gram, digest.sweep)
+    shrink = fit.offset_ratio / (1.0 + fit.offset_ratio * sums[:, 0, 0])
+    # Columns with their sweep's offset taken out: x − c 1 (1ᵀX).
+    columns = np.tile(fit.basis, (digest.n_units, 1, 1))
+    columns[:, 0, :] -= (shrink[:, None] * (sums[:, 0, :-1] @ fit.basis))[digest.sweep]
+    by_band = np.einsum("bpk,bfpq,bql->fkl", columns, digest.bands[:, :, :-1, :-1], columns, optimize=True)
+    freedom = (digest.gram[:, 0, 0, None] * digest.band_share).sum(axis=0)
+    # The fit takes freedom from the residual, most of it at low frequencies.
+    taken = np.trace(by_band, axis1=1, axis2=2)
+    left = np.maximum(freedom - taken, _MIN_FREE_SHARE * freedom)
+    spectrum = np.divide(power, left, out=np.zeros_like(power), where=left > 0)
+    return np.einsum("f,fkl->kl", spectrum, by_band), spectrum
+
+
+def _kernel_inflation(
+    design: VoltageDesign, fit: LeastSquares, jackknife: FloatArray, spectral: FloatArray
+) -> dict[str, float]:
+    inflation = {}
+    for name in design.kernels:
+        rows = fit.basis[design.columns[name]]
+        expected, found = rows @ spectral @ rows.T, rows @ jackknife @ rows.T
+        # Scaled to unit diagonal, so that what counts as excited does not depend on units.
+        sd = np.sqrt(np.diagonal(expected))
+        unit = 1.0 / np.where(sd > 0, sd, 1.0)
+        values, vectors = np.linalg.eigh(unit[:, None] * expected * unit)
+        kept = values > RANK_TOLERANCE * values[-1]
+        white = unit[:, None] * vectors[:, kept] / np.sqrt(values[kept])
+        ratio = np.trace(white.T @ found @ white) / np.count_nonzero(kept)
+        inflation[name] = float(np.sqrt(max(1.0, ratio)))
+    return inflation
+
+
+def _inflated(
+    design: VoltageDesign, fit: LeastSquares, spectral: FloatArray, inflation: dict[str, float]
+) -> FloatArray:
+    """D V0 D in whitened coordinates."""
+    factors = np.ones(design.n_weights)
+    for name, factor in inflation.items():
+        if name in design.columns:
+            factors[design.columns[name]] = factor
+    map_ = np.linalg.pinv(fit.basis) @ (factors[:, None] * fit.basis)
+    inflated: FloatArray = map_ @ spectral @ map_.T
+    return inflated
+
+
+def _satterthwaite(shares: FloatArray, contrasts: FloatArray) -> float:
+    """Smallest degrees of freedom of the jackknife variance of the given contrasts.
+
+    The jackknife variance of ``cᵀz`` is a sum of squares of the units' changes. Under white
+    residuals these have covariance ``G_b(δ_bb' L_b − L_b L_b')G_b'`` with L the units' shares and
+    ``G = (I − L)⁻¹``; matching two moments gives ν = (tr)²/tr(squared).
+    """
+    values, vectors = np.linalg.eigh(shares)
+    inverse = 1.0 / (1.0 - np.clip(values, 0.0, _MAX_LEVERAGE))
+    smallest = float(len(shares) - 1)
+    for contrast in contrasts:
+        moved = np.einsum("bkj,bj,blj,l->bk", vectors, inverse, vectors, contrast)
+        pulled = np.einsum("bkl,bl->bk", shares, moved)
+        cross = -pulled @ pulled.T
+        cross[np.diag_indices_from(cross)] += np.einsum("bk,bk->b", moved, pulled)
+        total = np.trace(cross)
+        if total > 0:
+            smallest = min(smallest, float(total**2 / np.sum(cross**2)))
+    return max(smallest, 1.0)

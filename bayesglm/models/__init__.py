@@ -1,0 +1,1 @@
+"""NumPyro models a user can read, and the priors they rest on."""

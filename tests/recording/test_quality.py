@@ -1,0 +1,228 @@
+"""Each row of the check: one recording that passes, one that must not."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from pathlib import Path
+
+import numpy as np
+import pytest
+from rc_cell import rc_recording, rc_voltage, recording_of, step_current
+
+from bayesglm.recording.quality import check_recording
+from bayesglm.recording.reading import read_recording
+from bayesglm.recording.recording import Recording, Sweep, TimeJump
+from bayesglm.recording.selection import parse_select, select
+from bayesglm.recording.settings import RecordingSection, Settings
+from bayesglm.recording.spikes import detect_spikes
+from bayesglm.verdict import Reason
+
+REAL_CELL = Path(__file__).parents[1] / "data" / "cell_a_steps.csv.gz"
+ORDER = [
+    "step",
+    "jitter",
+    "missing",
+    "time_jumps",
+    "current",
+    "clipping",
+    "spikes",
+    "baseline",
+    "baseline_drift",
+    "input_resistance",
+    "series_jump",
+    "linearity",
+]
+
+
+def _rows(recording: Recording, settings: Settings | None = None) -> dict[str, Reason]:
+    """Return the rows by name; of several input resistances the last."""
+    return {row.check: row for row in check_recording(recording, settings or Settings())}
+
+
+def _with(recording: Recording, index: int, **changes: object) -> Recording:
+    sweeps = list(recording.sweeps)
+    sweeps[index] = replace(sweeps[index], **changes)  # type: ignore[arg-type]
+    return replace(recording, sweeps=tuple(sweeps))
+
+
+@pytest.fixture
+def recording() -> Recording:
+    return rc_recording([-100, -50, 50, 100], series_MOhm=5, noise_mV=0.1)
+
+
+def test_a_sound_recording_passes_in_the_stated_order(recording: Recording) -> None:
+    rows = check_recording(recording, Settings())
+    assert list(dict.fromkeys(row.check for row in rows)) == ORDER
+    assert {row.verdict for row in rows} == {"passed"}
+    assert not any(row.command for row in rows)
+
+
+def test_every_row_that_does_not_pass_names_a_command() -> None:
+    recording = rc_recording([-100, 50, 100], series_MOhm=40)
+    recording = _with(recording, 2, spikes=np.array([5000]), jitter_ms=0.05)
+    rows = [row for row in check_recording(recording, Settings()) if row.verdict != "passed"]
+    assert [row.check for row in rows] == ["jitter", "series_jump", "linearity"]
+    assert all(row.command.startswith("bayesglm ") and row.advice for row in rows)
+
+
+def test_missing_rows_fail_with_place_length_and_the_sweeps_that_are_left(
+    recording: Recording,
+) -> None:
+    voltage = recording.sweeps[1].voltage.copy()
+    voltage[[10, 11, 12, 500]] = np.nan
+    row = _rows(_with(recording, 1, voltage=voltage))["missing"]
+    assert row.verdict == "failed"
+    # Sweep 1 begins on row 2 + 10,000.
+    assert row.value == "row 10012: 3 rows without a value (sweep 1), and 1 more"
+    assert "--select 'sweeps=0,2-3'" in row.command
+
+
+def test_missing_voltage_that_is_left_out_does_not_matter(recording: Recording) -> None:
+    voltage = recording.sweeps[1].voltage.copy()
+    voltage[10] = np.nan
+    keep = recording.sweeps[1].keep.copy()
+    keep[10] = False
+    rows = _rows(_with(recording, 1, voltage=voltage, keep=keep))
+    assert rows["missing"].verdict == "passed"
+
+
+def test_jumps_in_time_fail(recording: Recording) -> None:
+    jumps = (TimeJump(row=302, sample=300, before_ms=29.9, after_ms=35.0),)
+    row = _rows(_with(recording, 0, jumps=jumps))["time_jumps"]
+    assert (row.verdict, row.value) == ("failed", "row 302: time goes from 29.9 to 35 ms (sweep 0)")
+    assert "--select 'sweeps=1-3'" in row.command
+
+
+def test_the_command_leaves_out_every_kind_of_defect(recording: Recording) -> None:
+    jumps = (TimeJump(row=302, sample=300, before_ms=29.9, after_ms=35.0),)
+    voltage = recording.sweeps[2].voltage.copy()
+    voltage[10] = np.nan
+    rows = _rows(_with(_with(recording, 0, jumps=jumps), 2, voltage=voltage))
+    assert rows["missing"].command == rows["time_jumps"].command
+    assert "--select 'sweeps=1,3'" in rows["missing"].command
+
+
+def test_jitter_and_step_are_held_to_their_limits(recording: Recording) -> None:
+    assert _rows(_with(recording, 0, jitter_ms=0.009))["jitter"].verdict == "passed"
+    assert _rows(_with(recording, 0, jitter_ms=2e-13))["jitter"].value == "0 ms"
+    assert _rows(_with(recording, 0, jitter_ms=0.011))["jitter"].verdict == "caution"
+    assert _rows(replace(recording, step_ms=2.0))["step"].verdict == "caution"
+
+
+def test_a_constant_current_fails_even_where_sweeps_differ() -> None:
+    pairs = [(np.full(5000, level), np.full(5000, -70.0)) for level in (0.0, 0.1)]
+    row = _rows(recording_of(pairs))["current"]
+    assert (row.verdict, row.value) == ("failed", "0 to 100 pA, constant in every sweep")
+
+
+def test_a_current_without_values_fails() -> None:
+    rows = _rows(recording_of([(np.full(5000, np.nan), np.full(5000, -70.0))]))
+    assert rows["current"].verdict == "failed"
+    assert rows["missing"].verdict == "failed"
+    assert rows["baseline"].value == "not measured"
+
+
+def test_a_clipped_voltage_is_a_caution(recording: Recording) -> None:
+    clipped = np.minimum(recording.sweeps[3].voltage, -60.5)
+    row = _rows(_with(recording, 3, voltage=clipped))["clipping"]
+    assert row.verdict == "caution"
+    assert "at −60.5 mV" in row.value
+    assert "sweeps=0-2" in row.command
+
+
+def test_a_trace_without_noise_is_not_taken_for_clipped() -> None:
+    assert _rows(rc_recording([50, 100]))["clipping"].verdict == "passed"
+
+
+def test_spikes_are_counted_and_without_them_a_kernel_is_left_out(recording: Recording) -> None:
+    none = _rows(recording)["spikes"]
+    assert none.value == "0 spikes in 4 s (0 Hz); given in the test"
+    assert "after-spike kernel is left out" in none.advice
+    one = _rows(_with(recording, 3, spikes=np.array([5000])))["spikes"]
+    assert one.value == "1 spike in 4 s (0.25 Hz); given in the test"
+    assert one.advice == ""
+
+
+@pytest.mark.parametrize(
+    ("holding_pA", "recorded_pA", "name"),
+    [
+        (None, 0.0, "baseline at holding"),
+        (-50.0, 0.0, "baseline at holding"),
+        (0.0, 0.0, "rest"),
+        (0.0, -50.0, "baseline at holding"),
+    ],
+)
+def test_baseline_is_called_rest_only_where_nothing_is_held(
+    holding_pA: float | None, recorded_pA: float, name: str
+) -> None:
+    current = step_current(-100, holding_pA=recorded_pA)
+    recording = recording_of([(current, rc_voltage(current))])
+    settings = Settings(recording=RecordingSection(holding_pA=holding_pA))
+    row = _rows(recording, settings)["baseline"]
+    assert row.value == f"{name} {'−75.0' if recorded_pA else '−70.0'} mV (one sweep)"
+    assert ("holding_pA" in row.advice) is (holding_pA is None)
+
+
+@pytest.mark.parametrize(("drift_mV", "verdict"), [(2.5, "passed"), (-3.5, "caution")])
+def test_drift_beyond_its_limit_is_a_caution(drift_mV: float, verdict: str) -> None:
+    recording = rc_recording([-100] * 5)
+    sweeps = tuple(
+        replace(sweep, voltage=sweep.voltage + drift_mV * sweep.number / 4)
+        for sweep in recording.sweeps
+    )
+    row = _rows(replace(recording, sweeps=sweeps))["baseline_drift"]
+    assert row.verdict == verdict
+    assert row.value.startswith(f"{drift_mV:.1f} mV".replace("-", "−"))
+    assert ("sweeps=0-2" in row.command) is (verdict == "caution")
+
+
+@pytest.mark.parametrize(
+    ("series_MOhm", "verdict"), [(14.0, "passed"), (19.0, "caution"), (30.0, "caution")]
+)
+def test_an_unbalanced_bridge_is_a_caution(series_MOhm: float, verdict: str) -> None:
+    row = _rows(rc_recording([-100, -50], series_MOhm=series_MOhm))["series_jump"]
+    assert row.verdict == verdict
+    assert row.value.startswith(f"{series_MOhm:.1f} MΩ (90% interval")
+
+
+def test_the_interval_has_the_level_of_the_settings(recording: Recording) -> None:
+    settings = Settings.model_validate({"sampling": {"level": 0.8}})
+    assert "(80% interval" in _rows(recording, settings)["series_jump"].value
+
+
+def test_fluctuating_current_says_that_it_has_no_steps() -> None:
+    current = 0.05 * np.random.default_rng(6).standard_normal(10_000)
+    current[:1000] = 0
+    rows = _rows(recording_of([(current, rc_voltage(current))]))
+    for name in ("input_resistance", "series_jump", "linearity"):
+        assert rows[name].value == "not measured: no complete steps of current"
+        assert rows[name].verdict == "passed"
+    assert rows["baseline"].value == "baseline at holding −70.0 mV (one sweep)"
+
+
+def test_a_sweep_of_one_sample_does_no_harm(recording: Recording) -> None:
+    tiny = Sweep(
+        9, np.zeros(1), np.full(1, -70.0), np.ones(1, dtype=np.bool_), np.empty(0, dtype=np.int64)
+    )
+    assert _rows(replace(recording, sweeps=(*recording.sweeps, tiny)))["step"].verdict == "passed"
+
+
+def test_the_real_cell() -> None:
+    recording = detect_spikes(read_recording(REAL_CELL), RecordingSection())
+    rows = check_recording(recording, Settings())
+    by_name = {row.check: row for row in rows}
+    # Measured beforehand, by hand, on the same trace.
+    assert by_name["spikes"].value.startswith("117 spikes in 42.5 s (2.8 Hz)")
+    assert by_name["baseline"].value == "baseline at holding −62.1 mV (sd 0.46 over 17 sweeps)"
+    assert by_name["current"].value == "−100 to 300 pA"
+    assert by_name["linearity"].verdict == "caution"
+    assert by_name["linearity"].command == (
+        f"bayesglm fit {recording.source} --select 'current=-100:25pA' "
+        f"--out {recording.name}_selected"
+    )
+    proposed = parse_select(["current=-100:25pA"])
+    assert [sweep.number for sweep in select(recording, proposed).sweeps] == [0, 1, 2, 3, 4, 5]
+    others = {row.verdict for row in rows if row.check != "linearity"}
+    assert others == {"passed"}
+    levels = [row.value.split(":")[0] for row in rows if row.check == "input_resistance"]
+    assert levels == ["−100 pA", "−75 pA", "−50 pA", "−25 pA", "25 pA"]
