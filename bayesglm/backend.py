@@ -20,12 +20,16 @@ def cache_folder() -> Path:
 
 
 def _configure() -> None:
-    jax.config.update("jax_enable_x64", True)
-    jax.config.update("jax_platforms", "cpu")
-    jax.config.update("jax_compilation_cache_dir", str(cache_folder()))
-    # Compiled pieces here take a fraction of a second each but are many.
-    jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.05)
-    jax.config.update("jax_persistent_cache_min_entry_size_bytes", -1)
+    options = {
+        "jax_enable_x64": True,
+        "jax_platforms": "cpu",
+        "jax_compilation_cache_dir": str(cache_folder()),
+        # Compiled pieces here take a fraction of a second each, but there are many.
+        "jax_persistent_cache_min_compile_time_secs": 0.05,
+        "jax_persistent_cache_min_entry_size_bytes": -1,
+    }
+    for name, value in options.items():
+        jax.config.update(name, value)  # type: ignore[no-untyped-call]
 
 
 _configure()

@@ -45,6 +45,8 @@ def parse_header(name: str) -> tuple[str, float] | None:
                 raise InputError(f"column {name!r} has no unit; expected {wanted}")
             if unit not in factors:
                 hint = nearest(unit, factors)
-                raise InputError(f"column {name!r} has unknown unit {unit!r}; expected {wanted}{hint}")
+                raise InputError(
+                    f"column {name!r} has unknown unit {unit!r}; expected {wanted}{hint}"
+                )
             return quantity, factors[unit]
     return None

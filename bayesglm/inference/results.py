@@ -115,16 +115,15 @@ class DriveRange:
         The range in words, such as ``50–125 pA`` or ``2–5 Hz``.
     units
         Indices of its units in the digest.
-    curve_mean, curve_sd
-        The kernel from these units alone, at the lags of the kernel's `Band`.
+    curve
+        Mean and sd of the kernel from these units alone, at the lags of the kernel's `Band`.
     features
         Mean and sd of each feature of this kernel from these units alone.
     """
 
     label: str
     units: IntArray
-    curve_mean: FloatArray
-    curve_sd: FloatArray
+    curve: tuple[FloatArray, FloatArray]
     features: dict[str, tuple[float, float]]
 
 
@@ -139,7 +138,7 @@ class Split:
     ranges
         Three ranges of drive, from the lowest; empty where fewer than six units excite it.
     disagreement
-        Root mean square over lags of the difference between ranges in units of its error.
+        How far the ranges are apart at the worst lag, in sds; NaN without ranges.
     """
 
     kernel: str

@@ -141,5 +141,3 @@ def _compiled_run(
         return (constrained, *statistics)
 
     return jax.lax.map(run_chain, keys)  # type: ignore[no-any-return]
-
-

@@ -65,7 +65,9 @@ def smoothness_prior(spec: KernelSpec) -> SmoothnessPrior:
     differences = _divided_second_differences(centres)[:, :n]
     structure = differences.T @ differences
     free = (1.0 - centres)[:n]
-    grid = np.expm1(np.linspace(0, 1, _GRID, endpoint=False) * np.log1p(spec.duration_ms / spec.warp_ms))
+    grid = np.expm1(
+        np.linspace(0, 1, _GRID, endpoint=False) * np.log1p(spec.duration_ms / spec.warp_ms)
+    )
     basis = spec.evaluate(spec.warp_ms * grid)
 
     covariance = np.linalg.pinv(structure, rcond=1e-12, hermitian=True)
@@ -94,8 +96,7 @@ def _divided_second_differences(x: FloatArray) -> FloatArray:
         left, right = x[i + 1] - x[i], x[i + 2] - x[i + 1]
         span = left + right
         # Times √(span/2), so that the squares sum to the integral of the squared bend.
-        rows[i, i : i + 3] = (
-            np.array([2 / (left * span), -2 / (left * right), 2 / (right * span)])
-            * np.sqrt(span / 2)
-        )
+        rows[i, i : i + 3] = np.array(
+            [2 / (left * span), -2 / (left * right), 2 / (right * span)]
+        ) * np.sqrt(span / 2)
     return rows

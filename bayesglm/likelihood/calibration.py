@@ -20,6 +20,7 @@ the recording excites.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -27,7 +28,7 @@ import numpy as np
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.likelihood.offsets import marginalise, reml_ratio, sweep_sums
-from bayesglm.recording.recording import FloatArray
+from bayesglm.recording.recording import FloatArray, IntArray
 
 #: Directions with less than this share of the largest information count as never excited.
 RANK_TOLERANCE = 1e-10
@@ -37,6 +38,11 @@ _MAX_LEVERAGE = 0.5
 
 #: A band's residual keeps at least this share of its freedom, however much the fit takes.
 _MIN_FREE_SHARE = 0.1
+
+#: Bands, from the lowest, that make up the long-run variance: up to 1 Hz.
+_SLOW_BANDS = 3
+
+_OFFSET_ROUNDS = 3
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,7 +58,9 @@ class LeastSquares:
     residual_variance
         Residual variance σ̂² of the rows, mV².
     offset_ratio
-        ρ, variance of the sweep offsets in units of σ̂².
+        ρ, variance of the sweep offsets in units of the residual's long-run variance.
+    offset_variance
+        σ_e², variance of the sweep offsets, mV².
     lost
         Directions of the weights that the recording never excites, shape (P, P − K).
     """
@@ -61,6 +69,7 @@ class LeastSquares:
     basis: FloatArray
     residual_variance: float
     offset_ratio: float
+    offset_variance: float
     lost: FloatArray
 
     @property
@@ -86,24 +95,30 @@ class Calibration:
         V in whitened coordinates, shape (K, K).
     jackknife, spectral
         V_jack and V0 in whitened coordinates, shape (K, K).
+    ratio
+        Of each kernel: sd between units over sd from the residual's spectrum.
     inflation
-        D of each kernel: sd between units over sd from the residual's spectrum.
+        D of each kernel: the ratio, but at least one.
     spectrum
         Residual spectrum by band, as variance of white noise of that level, mV², shape (F,).
     freedom
         ν, the smallest Satterthwaite degrees of freedom of the reported scalars.
     leverage
         Largest share of any direction that each unit carries, shape (B,).
+    changes
+        ẑ − ẑ without each unit, shape (B, K).
     """
 
     fit: LeastSquares
     covariance: FloatArray
     jackknife: FloatArray
     spectral: FloatArray
+    ratio: dict[str, float]
     inflation: dict[str, float]
     spectrum: FloatArray
     freedom: float
     leverage: FloatArray
+    changes: FloatArray
 
     @property
     def precision(self) -> FloatArray:
@@ -129,8 +144,8 @@ def column_scale(digest: VoltageDigest) -> FloatArray:
 def least_squares(
     digest: VoltageDigest,
     scale: FloatArray,
-    offset_ratio: float | None = 0.0,
-    tolerance: float = RANK_TOLERANCE,
+    offset_ratio: float = 0.0,
+    offset_variance: float = 0.0,
 ) -> LeastSquares:
     """Least squares on the directions that the recording excites.
 
@@ -141,21 +156,17 @@ def least_squares(
     scale
         Scale of the weights, shape (P, P): a square root of the prior covariance, or
         `column_scale`. What counts as "never excited" is judged after scaling.
-    offset_ratio
-        ρ of the sweep offsets; None estimates it by REML.
-    tolerance
-        Directions with less than this share of the largest information are left out.
+    offset_ratio, offset_variance
+        ρ and σ_e² of the sweep offsets, see `with_sweep_offsets`; zero for none.
 
     Returns
     -------
     LeastSquares
     """
     sums = sweep_sums(digest.gram, digest.sweep)
-    if offset_ratio is None:
-        offset_ratio = reml_ratio(sums, scale, tolerance)
     total = marginalise(sums, offset_ratio).sum(axis=0)
     eigenvalues, vectors = np.linalg.eigh(scale.T @ total[:-1, :-1] @ scale)
-    kept = eigenvalues > tolerance * eigenvalues[-1]
+    kept = eigenvalues > RANK_TOLERANCE * eigenvalues[-1]
     basis = scale @ vectors[:, kept] / np.sqrt(eigenvalues[kept])
     z = basis.T @ total[:-1, -1]
     freedom = max(digest.n_rows - basis.shape[1], 1.0)
@@ -164,8 +175,35 @@ def least_squares(
         basis=basis,
         residual_variance=max(float(total[-1, -1] - z @ z), 0.0) / freedom,
         offset_ratio=offset_ratio,
+        offset_variance=offset_variance,
         lost=scale @ vectors[:, ~kept],
     )
+
+
+def with_sweep_offsets(digest: VoltageDigest, scale: FloatArray) -> LeastSquares:
+    """Least squares with sweep offsets, their variance estimated by REML.
+
+    The residual's long-run variance, which REML needs, depends on the fit; a few rounds settle.
+
+    Parameters
+    ----------
+    digest, scale
+        As for `least_squares`.
+
+    Returns
+    -------
+    LeastSquares
+    """
+    fit = least_squares(digest, scale)
+    sums = sweep_sums(digest.gram, digest.sweep)
+    for _ in range(_OFFSET_ROUNDS):
+        long_run = _long_run_variance(digest, fit)
+        if long_run <= 0:
+            return fit
+        effective = sums * min(1.0, fit.residual_variance / long_run)
+        ratio = reml_ratio(effective, scale, RANK_TOLERANCE) * fit.residual_variance / long_run
+        fit = least_squares(digest, scale, ratio, ratio * long_run)
+    return fit
 
 
 def unit_scores(digest: VoltageDigest, fit: LeastSquares) -> FloatArray:
@@ -211,8 +249,9 @@ def calibrate(
     jackknife = (n_units - 1) / n_units * changes.T @ changes + between[1]
     spectral, spectrum = _spectral_covariance(digest, fit)
     spectral = spectral + between[0]
+    ratio = inflation or _kernel_ratio(digest.design, fit, jackknife, spectral)
     if inflation is None:
-        inflation = _kernel_inflation(digest.design, fit, jackknife, spectral)
+        inflation = {name: max(1.0, value) for name, value in ratio.items()}
         target = _inflated(digest.design, fit, spectral, inflation)
         covariance = (n_units * jackknife + rank * target) / (n_units + rank)
     else:
@@ -222,10 +261,12 @@ def calibrate(
         covariance=(covariance + covariance.T) / 2,
         jackknife=jackknife,
         spectral=spectral,
+        ratio=ratio,
         inflation=inflation,
         spectrum=spectrum,
         freedom=_satterthwaite(shares, contrasts @ fit.basis),
-        leverage=np.linalg.eigvalsh(shares)[:, -1],
+        leverage=np.asarray(np.linalg.eigvalsh(shares)[:, -1], dtype=np.float64),
+        changes=changes,
     )
 
 
@@ -266,14 +307,76 @@ def _between_sweeps(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArra
     sums = sweep_sums(digest.gram, digest.sweep)
     weight = 1.0 / (1.0 + fit.offset_ratio * sums[:, 0, 0])
     pull = weight[:, None] * sums[:, 0, :-1] @ fit.basis
-    variance = fit.offset_ratio * fit.residual_variance
+    variance = fit.offset_variance
     cut = np.bincount(digest.sweep, minlength=len(sums)) > 1
     return variance * pull.T @ pull, variance * pull[cut].T @ pull[cut]
 
 
-def _spectral_covariance(
-    digest: VoltageDigest, fit: LeastSquares
-) -> tuple[FloatArray, FloatArray]:
+def inflation_within(
+    digest: VoltageDigest, calibration: Calibration, groups: Sequence[IntArray]
+) -> dict[str, float]:
+    """D of each kernel from the spread of units inside groups, differences between them removed.
+
+    Parameters
+    ----------
+    digest, calibration
+        The whole digest and its calibration.
+    groups
+        Indices of the units of each group; groups of one unit say nothing.
+
+    Returns
+    -------
+    dict
+        By kernel, at least one.
+    """
+    rank = calibration.fit.rank
+    within, units = np.zeros((rank, rank)), 0
+    for group in groups:
+        if len(group) > 1:
+            centred = calibration.changes[group] - calibration.changes[group].mean(axis=0)
+            within += len(group) / (len(group) - 1) * centred.T @ centred
+            units += len(group)
+    if not units:
+        return dict.fromkeys(digest.design.kernels, 1.0)
+    # As if the groups were all the units there are.
+    within *= digest.n_units / units
+    ratio = _kernel_ratio(digest.design, calibration.fit, within, calibration.spectral)
+    return {name: max(1.0, value) for name, value in ratio.items()}
+
+
+def correlation_time_ms(digest: VoltageDigest, fit: LeastSquares) -> float:
+    """Integrated correlation time of the residual, ms: τ where it decays as ``exp(−t/τ)``."""
+    if fit.residual_variance <= 0:
+        return 0.0
+    return _long_run_variance(digest, fit) / fit.residual_variance * digest.design.row_ms / 2
+
+
+def noise_log_sd(digest: VoltageDigest, fit: LeastSquares) -> tuple[float, float]:
+    """Log of the residual's sd in mV, and the jackknife error of that log over units."""
+    residual = _residual_vectors(digest, fit)
+    power = np.einsum("bi,bij,bj->b", residual, digest.gram, residual)
+    rows = digest.gram[:, 0, 0]
+    whole = max(power.sum(), np.finfo(float).tiny)
+    others = np.maximum(whole - power, np.finfo(float).tiny) / np.maximum(rows.sum() - rows, 1.0)
+    n = len(rows)
+    spread = (n - 1) / n * np.sum((np.log(others) - np.log(others).mean()) ** 2)
+    return float(0.5 * np.log(whole / rows.sum())), float(0.5 * np.sqrt(spread))
+
+
+def _long_run_variance(digest: VoltageDigest, fit: LeastSquares) -> float:
+    """Residual spectrum at the lowest frequencies, as variance of white noise of that level."""
+    spectrum, weight = _spectral_covariance(digest, fit)[1], _band_rows(digest)
+    slow = weight[:_SLOW_BANDS].sum()
+    return float(spectrum[:_SLOW_BANDS] @ weight[:_SLOW_BANDS] / slow) if slow > 0 else 0.0
+
+
+def _band_rows(digest: VoltageDigest) -> FloatArray:
+    """Rows' worth of white noise in each band, shape (F,)."""
+    rows: FloatArray = (digest.gram[:, 0, 0, None] * digest.band_share).sum(axis=0)
+    return rows
+
+
+def _spectral_covariance(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArray, FloatArray]:
     """V0 within sweeps, (K, K), and the residual spectrum, (F,)."""
     residual = _residual_vectors(digest, fit)
     power = np.einsum("bi,bfij,bj->f", residual, digest.bands, residual)
@@ -282,8 +385,10 @@ def _spectral_covariance(
     # Columns with their sweep's offset taken out: x − c 1 (1ᵀX).
     columns = np.tile(fit.basis, (digest.n_units, 1, 1))
     columns[:, 0, :] -= (shrink[:, None] * (sums[:, 0, :-1] @ fit.basis))[digest.sweep]
-    by_band = np.einsum("bpk,bfpq,bql->fkl", columns, digest.bands[:, :, :-1, :-1], columns, optimize=True)
-    freedom = (digest.gram[:, 0, 0, None] * digest.band_share).sum(axis=0)
+    by_band = np.einsum(
+        "bpk,bfpq,bql->fkl", columns, digest.bands[:, :, :-1, :-1], columns, optimize=True
+    )
+    freedom = _band_rows(digest)
     # The fit takes freedom from the residual, most of it at low frequencies.
     taken = np.trace(by_band, axis1=1, axis2=2)
     left = np.maximum(freedom - taken, _MIN_FREE_SHARE * freedom)
@@ -291,10 +396,10 @@ def _spectral_covariance(
     return np.einsum("f,fkl->kl", spectrum, by_band), spectrum
 
 
-def _kernel_inflation(
+def _kernel_ratio(
     design: VoltageDesign, fit: LeastSquares, jackknife: FloatArray, spectral: FloatArray
 ) -> dict[str, float]:
-    inflation = {}
+    ratios = {}
     for name in design.kernels:
         rows = fit.basis[design.columns[name]]
         expected, found = rows @ spectral @ rows.T, rows @ jackknife @ rows.T
@@ -305,8 +410,8 @@ def _kernel_inflation(
         kept = values > RANK_TOLERANCE * values[-1]
         white = unit[:, None] * vectors[:, kept] / np.sqrt(values[kept])
         ratio = np.trace(white.T @ found @ white) / np.count_nonzero(kept)
-        inflation[name] = float(np.sqrt(max(1.0, ratio)))
-    return inflation
+        ratios[name] = float(np.sqrt(ratio))
+    return ratios
 
 
 def _inflated(

@@ -107,11 +107,16 @@ class VoltageDigest:
             self,
             gram=np.array([self.gram[g].sum(axis=0) for g in groups]),
             bands=np.array([self.bands[g].sum(axis=0) for g in groups]),
-            band_share=np.array([w @ self.band_share[g] for g, w in zip(groups, weights, strict=True)]),
+            band_share=np.array(
+                [w @ self.band_share[g] for g, w in zip(groups, weights, strict=True)]
+            ),
             sweep=np.array([self.sweep[g[0]] for g in groups]),
             drive_nA=np.array([w @ self.drive_nA[g] for g, w in zip(groups, weights, strict=True)]),
             current_sd_nA=np.array(
-                [np.sqrt(w @ self.current_sd_nA[g] ** 2) for g, w in zip(groups, weights, strict=True)]
+                [
+                    np.sqrt(w @ self.current_sd_nA[g] ** 2)
+                    for g, w in zip(groups, weights, strict=True)
+                ]
             ),
             spikes=np.array([self.spikes[g].sum() for g in groups]),
             seconds=np.array([self.seconds[g].sum() for g in groups]),

@@ -1,10 +1,15 @@
 """Offsets of sweeps, integrated out of a digest.
 
-Each sweep s has an offset ``e_s ~ N(0, σ_e²)`` on top of the common one. With white residuals
-of variance σ² the sweep's rows then have precision ``(I − c_s 11ᵀ)/σ²`` with
-``c_s = ρ/(1 + n_s ρ)``, ``ρ = σ_e²/σ²``. The sums that this needs, ``1ᵀX`` and ``1ᵀv``, are the
-row and entry of the Gram matrix that belong to the constant column. ρ is estimated by
-restricted maximum likelihood (Patterson & Thompson 1971, Biometrika 58:545–554).
+Each sweep s has an offset ``e_s ~ N(0, σ_e²)`` on top of the common one. The sweep's rows are
+then weighted by ``I − c_s 11ᵀ`` with ``c_s = ρ/(1 + n_s ρ)``, ``ρ = σ_e²/σ_r²``. The sums that this
+needs, ``1ᵀX`` and ``1ᵀv``, are the row and entry of the Gram matrix that belong to the constant
+column. ρ is estimated by restricted maximum likelihood (Patterson & Thompson 1971, Biometrika
+58:545–554).
+
+σ_r² is the residual's *long-run* variance, its spectrum at the lowest frequencies. It is what
+decides how well a sweep's mean is known. The plain variance of a correlated residual is
+hundreds of times smaller and would take every wander of the noise for an offset: REML is
+therefore told that the rows hold ``n σ²/σ_r²`` independent values.
 """
 
 from __future__ import annotations
@@ -34,7 +39,7 @@ def marginalise(gram: FloatArray, ratio: float) -> FloatArray:
     gram
         Gram matrices of (x, v) with x[0] = 1, shape (..., P + 1, P + 1).
     ratio
-        ρ, variance of the offsets in units of the residual variance.
+        ρ, variance of the offsets in units of the residual's long-run variance.
 
     Returns
     -------
@@ -46,12 +51,13 @@ def marginalise(gram: FloatArray, ratio: float) -> FloatArray:
 
 
 def reml_ratio(sums: FloatArray, scale: FloatArray, tolerance: float) -> float:
-    """Restricted-maximum-likelihood estimate of ρ.
+    """Restricted-maximum-likelihood estimate of ρ for rows with white residuals.
 
     Parameters
     ----------
     sums
-        Gram matrices by sweep, shape (S, P + 1, P + 1).
+        Gram matrices by sweep, shape (S, P + 1, P + 1); divided by σ_r²/σ² where the residual
+        is correlated.
     scale
         Scale of the weights, shape (P, P); see `calibration.whitening`.
     tolerance
@@ -72,7 +78,7 @@ def reml_ratio(sums: FloatArray, scale: FloatArray, tolerance: float) -> float:
         eigenvalues, vectors = np.linalg.eigh(scale.T @ total[:-1, :-1] @ scale)
         kept = eigenvalues > tolerance * eigenvalues[-1]
         z = vectors[:, kept].T @ scale.T @ total[:-1, -1] / np.sqrt(eigenvalues[kept])
-        freedom = rows.sum() - np.count_nonzero(kept)
+        freedom = max(rows.sum() - np.count_nonzero(kept), 1.0)
         variance = max((total[-1, -1] - z @ z) / freedom, np.finfo(float).tiny)
         return float(
             freedom * np.log(variance)

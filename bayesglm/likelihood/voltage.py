@@ -19,7 +19,6 @@ import numpy as np
 
 from bayesglm import backend as backend
 from bayesglm.errors import InputError
-from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import RowFilter, VoltageDesign, filter_rows, row_filter, row_means
 from bayesglm.likelihood.digest import BAND_EDGES_HZ, VoltageDigest, add
 from bayesglm.recording.recording import BoolArray, FloatArray, IntArray, Recording, Sweep
@@ -137,7 +136,7 @@ def row_digest(
     grams, bands, shares = [], [], []
     z = np.column_stack([rows, voltage])
     for unit in labels:
-        gram, band, share = _zero_sums(z.shape[1])
+        gram, band, _ = _zero_sums(z.shape[1])
         members = z[units == unit]
         for start in range(0, len(members), _N_FFT):
             chunk = _padded(members[start : start + _N_FFT], _N_FFT)
@@ -170,10 +169,10 @@ def common_current(recording: Recording) -> BoolArray:
     longest = max(sweep.n_samples for sweep in recording.sweeps)
     if len(recording.sweeps) == 1:
         return np.zeros(longest, dtype=np.bool_)
-    same = np.ones(longest, dtype=np.bool_)
+    same: BoolArray = np.ones(longest, dtype=np.bool_)
     first = max(recording.sweeps, key=lambda sweep: sweep.n_samples).current
     for sweep in recording.sweeps:
-        same[: sweep.n_samples] &= sweep.current == first[: sweep.n_samples]
+        same[: sweep.n_samples] &= np.equal(sweep.current, first[: sweep.n_samples])
     return same if not same.all() else np.zeros(longest, dtype=np.bool_)
 
 
@@ -189,7 +188,7 @@ def kept_rows(sweep: Sweep, design: VoltageDesign, step_ms: float, m: int) -> Bo
     return whole
 
 
-def design_chunks(
+def predict_rows(
     sweep: Sweep, design: VoltageDesign, step_ms: float, weights: FloatArray
 ) -> FloatArray:
     """Predict a sweep's rows: ``x @ weights`` for many weight vectors at once.
@@ -214,7 +213,7 @@ def design_chunks(
     rows = _sweep_rows(sweep, design, step_ms, m, filters)
     n_rows = len(rows.voltage)
     out = np.empty((n_rows, weights.shape[1]))
-    chunk = filters["input"].chunk if "after_spike" not in filters else _chunk(filters)
+    chunk = _chunk(filters)
     for start in range(0, n_rows, chunk):
         stop = min(start + chunk, n_rows)
         z = np.asarray(_design_rows(rows, start, stop, filters, design, masked=False))
@@ -227,8 +226,8 @@ def _refuse_long_kernels(recording: Recording, design: VoltageDesign) -> None:
     for name, spec in design.kernels.items():
         if spec.duration_ms > longest:
             raise InputError(
-                f"{recording.source}: kernels.{name}.duration_ms is {spec.duration_ms:g} ms, but the "
-                f"longest sweep lasts {longest:g} ms; set it to at most {longest / 2:g}"
+                f"{recording.source}: kernels.{name}.duration_ms is {spec.duration_ms:g} ms, but "
+                f"the longest sweep lasts {longest:g} ms; set it to at most {longest / 2:g}"
             )
 
 

@@ -54,7 +54,9 @@ class WeightPrior:
 
     def precision(self, sds: FloatArray) -> FloatArray:
         """Prior precision of the weights for given kernel sds, shape (P, P)."""
-        total: FloatArray = self.fixed + np.einsum("k,kpq->pq", 1.0 / np.asarray(sds) ** 2, self.bend)
+        total: FloatArray = self.fixed + np.einsum(
+            "k,kpq->pq", 1.0 / np.asarray(sds) ** 2, self.bend
+        )
         return total
 
     @property

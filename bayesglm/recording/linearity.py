@@ -54,6 +54,19 @@ class LinearRange:
     chance_mV: float
     complete: bool
 
+    @property
+    def whole_pA(self) -> tuple[float, float]:
+        """The range rounded outwards to whole pA, so that its own levels lie inside."""
+        lower = np.floor(round(self.lower_nA * 1e3, 3))
+        upper = np.ceil(round(self.upper_nA * 1e3, 3))
+        return float(lower) + 0.0, float(upper) + 0.0  # no negative zero
+
+    @property
+    def selection(self) -> str:
+        """The range as an expression for ``--select``."""
+        lower, upper = self.whole_pA
+        return f"current={lower:g}:{upper:g}pA"
+
 
 def linear_range(measures: StepMeasures) -> LinearRange | None:
     """Find the widest contiguous range of levels, around the holding current, that is linear.

@@ -13,7 +13,7 @@ from typing import Final
 import numpy as np
 
 from bayesglm.recording.current import SAME_LEVEL_NA
-from bayesglm.recording.linearity import LARGEST_SHARE, LinearRange, linear_range
+from bayesglm.recording.linearity import LARGEST_SHARE, linear_range
 from bayesglm.recording.ranges import format_sweeps
 from bayesglm.recording.recording import BoolArray, FloatArray, Recording, Sweep
 from bayesglm.recording.settings import Settings
@@ -332,7 +332,7 @@ def _linearity(recording: Recording, measures: StepMeasures) -> Reason:
             "the kernels describe this protocol, not the cell: give smaller steps",
             fit_command(recording, ""),
         )
-    lower, upper = _whole_pA(found)
+    lower, upper = found.whole_pA
     value = (
         f"linear from {minus(f'{lower:g}')} to {minus(f'{upper:g}')} pA "
         f"({found.resistance_MOhm:.0f} MΩ; largest departure {found.departure_mV:.1f} mV at "
@@ -348,15 +348,8 @@ def _linearity(recording: Recording, measures: StepMeasures) -> Reason:
         "beyond this range the cell spikes or bends, and a linear kernel averages over what it "
         f"does there; inside, departures below {found.chance_mV:.1f} mV would not be seen at a "
         "level given once",
-        fit_command(recording, f"current={lower:g}:{upper:g}pA"),
+        fit_command(recording, found.selection),
     )
-
-
-def _whole_pA(found: LinearRange) -> tuple[float, float]:
-    """Round the range outwards to whole pA, so that its own levels lie inside."""
-    lower = np.floor(round(found.lower_nA * 1e3, 3))
-    upper = np.ceil(round(found.upper_nA * 1e3, 3))
-    return float(lower) + 0.0, float(upper) + 0.0  # no negative zero
 
 
 def _true_runs(flags: BoolArray) -> list[tuple[int, int]]:

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from bayesglm.errors import InputError
 
-FloatArray = NDArray[np.float64]
+FloatArray = NDArray[np.floating]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 

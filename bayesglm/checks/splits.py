@@ -1,0 +1,164 @@
+"""The same model fitted to parts of a recording: by range of drive, and odd against even.
+
+A linear kernel of a nonlinear cell belongs to cell and protocol. Fitting the units with little
+and with much drive apart shows how far; fitting odd and even units apart shows whether the
+recording agrees with itself. Digests add, so each part costs a small linear solve.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.stats import chi2, norm
+
+from bayesglm.likelihood.calibration import Calibration, calibrate, least_squares
+from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.models.cell import conditional_weights, voltage_evidence
+from bayesglm.models.priors import WeightPrior
+from bayesglm.recording.recording import FloatArray, IntArray
+
+#: Fewer exciting units than this cannot be cut into three ranges.
+FEWEST_UNITS = 6
+_RANGES = 3
+
+#: Lags where a part's sd is below this share of the largest are pinned by construction.
+_SMALLEST_SD_SHARE = 0.02
+
+
+@dataclass(frozen=True, eq=False)
+class PartEstimate:
+    """What a part of the recording says of the weights.
+
+    Attributes
+    ----------
+    units
+        Indices of its units in the digest.
+    mean, covariance
+        Of the weights, shapes (P,) and (P, P), given the whole recording's kernel sds.
+    """
+
+    units: IntArray
+    mean: FloatArray
+    covariance: FloatArray
+
+    def sample(self, n: int, rng: np.random.Generator) -> FloatArray:
+        """Draw weights, shape (n, P)."""
+        values, vectors = np.linalg.eigh(self.covariance)
+        root = vectors * np.sqrt(np.clip(values, 0.0, None))
+        draws: FloatArray = self.mean + rng.normal(size=(n, len(values))) @ root.T
+        return draws
+
+
+def exciting_units(digest: VoltageDigest, kernel: str) -> IntArray:
+    """Units that say something of a kernel: the current varies, or there is a spike."""
+    if kernel == "after_spike":
+        return np.flatnonzero(digest.spikes > 0)
+    return np.flatnonzero(digest.current_sd_nA > 1e-3 * digest.current_sd_nA.max(initial=0.0))
+
+
+def drive(digest: VoltageDigest) -> tuple[FloatArray, str]:
+    """Drive of each unit and its unit of measure: mean current in pA, else firing rate in Hz.
+
+    Mean current tells units apart where it differs between them by more than chance; under a
+    stationary fluctuating current it does not, and the firing rate is taken.
+    """
+    spread = float(digest.drive_nA.std())
+    within = float(np.sqrt(np.mean(digest.current_sd_nA**2)))
+    if spread > 0.25 * within:
+        return digest.drive_nA * 1e3, "pA"
+    return digest.spikes / digest.seconds, "Hz"
+
+
+def drive_ranges(digest: VoltageDigest, kernel: str) -> tuple[IntArray, ...]:
+    """Cut the units that excite a kernel into three ranges of drive, extras to the lower.
+
+    Returns
+    -------
+    tuple of arrays of unit indices
+        Empty where fewer than six units excite the kernel.
+    """
+    units = exciting_units(digest, kernel)
+    if len(units) < FEWEST_UNITS:
+        return ()
+    ordered = units[np.argsort(drive(digest)[0][units], kind="stable")]
+    # array_split gives the extras to the first parts.
+    return tuple(np.asarray(part) for part in np.array_split(ordered, _RANGES))
+
+
+def range_label(digest: VoltageDigest, units: IntArray) -> str:
+    """Name a range of drive: ``50–125 pA``."""
+    values, unit = drive(digest)
+    low, high = values[units].min(), values[units].max()
+    digits = 0 if unit == "pA" else 1
+    text = f"{low:.{digits}f}" if low == high else f"{low:.{digits}f}–{high:.{digits}f}"
+    return f"{text} {unit}".replace("-", "−")
+
+
+def estimate_part(
+    digest: VoltageDigest,
+    units: IntArray,
+    whole: Calibration,
+    inflation: dict[str, float],
+    prior: WeightPrior,
+    sd: FloatArray,
+) -> PartEstimate:
+    """Fit a part of the units, with what the whole recording says of smoothness and offsets.
+
+    Parameters
+    ----------
+    digest
+        The whole digest.
+    units
+        Indices of the units of the part.
+    whole
+        Calibration of the whole digest; its sweep offsets are taken over.
+    inflation
+        D of each kernel, from the spread of units inside the parts.
+    prior
+        Prior of the weights.
+    sd
+        Sd of each kernel, shape (n_kernels,).
+
+    Returns
+    -------
+    PartEstimate
+    """
+    part = digest.take(units)
+    fit = least_squares(part, prior.root, whole.fit.offset_ratio, whole.fit.offset_variance)
+    calibration = calibrate(part, fit, np.empty((0, digest.design.n_weights)), inflation)
+    evidence = voltage_evidence(fit.weights, calibration.precision, fit.rank, whole.freedom, prior)
+    mean, factor = conditional_weights(evidence, sd[None], np.ones(1))
+    root = prior.root @ np.linalg.inv(factor[0]).T
+    return PartEstimate(units, prior.mean + prior.root @ mean[0], root @ root.T)
+
+
+def disagreement(means: FloatArray, sds: FloatArray) -> float:
+    """How far estimates of one curve from several parts are apart, in units of their error.
+
+    Parameters
+    ----------
+    means, sds
+        Shape (parts, n_lags).
+
+    Returns
+    -------
+    The largest over lags of how surprising ``Σ_g (x_g − x̄)²/sd_g²`` is, told as the number of
+    standard deviations of a normal variate that would surprise as much; x̄ is the
+    precision-weighted mean. Zero where no lag has an error.
+    """
+    usable = np.all(sds > _SMALLEST_SD_SHARE * np.nanmax(sds, initial=0.0), axis=0)
+    if not usable.any():
+        return 0.0
+    x, precision = means[:, usable], 1.0 / sds[:, usable] ** 2
+    centre = (precision * x).sum(axis=0) / precision.sum(axis=0)
+    chi_square = (precision * (x - centre) ** 2).sum(axis=0)
+    log_p = chi2.logsf(chi_square.max(), df=len(x) - 1)
+    # Beyond 37 sds the tail of the normal is zero in float64.
+    return float(min(norm.isf(np.exp(log_p) / 2), 37.0))
+
+
+def between_sd(means: FloatArray, sds: FloatArray) -> FloatArray:
+    """``√max(0, variance of the estimates − mean of their variances)`` over parts, axis 0."""
+    excess = means.var(axis=0, ddof=1) - (sds**2).mean(axis=0)
+    return np.sqrt(np.maximum(excess, 0.0))

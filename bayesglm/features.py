@@ -1,0 +1,196 @@
+"""Numbers read off the kernels, draw by draw, with definitions that create no effects.
+
+A minimum taken in every draw would be biased downwards by noise, and the maximum of a noisy
+flat curve is always positive. Extrema are therefore read at the lag of the mean curve's
+extremum, and a bump counts only where the kernel exceeds δ for several milliseconds.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from bayesglm.inference.bands import identified, kernel_lags, kernel_rows
+from bayesglm.kernels.design import VoltageDesign
+from bayesglm.recording.recording import FloatArray
+
+#: A bump is η above this, mV, …
+BUMP_MV = 0.25
+#: … for at least this long, ms.
+BUMP_MS = 5.0
+
+
+@dataclass(frozen=True, eq=False)
+class FeatureDraws:
+    """Draws of one feature.
+
+    Attributes
+    ----------
+    kernel
+        The kernel it is read from; empty for the offset and the noise.
+    unit
+        Unit of the draws.
+    draws
+        Shape (D,).
+    is_probability
+        Whether the draws are 0/1 events of which only the mean is of interest.
+    """
+
+    kernel: str
+    unit: str
+    draws: FloatArray
+    is_probability: bool = False
+
+
+def resistance_row(design: VoltageDesign, step_ms: float) -> FloatArray:
+    """Combination of the weights that is the input resistance ``Σ_k κ_k dt``, MΩ, shape (P,)."""
+    lags = design.input.lags(step_ms)
+    row: FloatArray = kernel_rows(design, "input", lags).sum(axis=0) * step_ms
+    return row
+
+
+def reported_rows(
+    design: VoltageDesign, step_ms: float, report_at_ms: tuple[float, ...]
+) -> FloatArray:
+    """The reported scalars that are linear in the weights, shape (n, P): they set ν."""
+    offset = np.zeros((1, design.n_weights))
+    offset[0, 0] = 1.0
+    rows = [offset, resistance_row(design, step_ms)[None]]
+    if design.after_spike is not None:
+        rows.append(kernel_rows(design, "after_spike", _reported_lags(design, report_at_ms)))
+    return np.concatenate(rows)
+
+
+def feature_draws(
+    weights: FloatArray, design: VoltageDesign, step_ms: float, report_at_ms: tuple[float, ...]
+) -> dict[str, FeatureDraws]:
+    """Read the features off draws of the weights.
+
+    Parameters
+    ----------
+    weights
+        Shape (D, P).
+    design
+        The linear model.
+    step_ms
+        Recorded step, ms.
+    report_at_ms
+        Lags after a spike at which η is reported, ms; those outside what is identified are
+        left out.
+
+    Returns
+    -------
+    dict
+        By name, in the order of the table.
+    """
+    found = {
+        "input_resistance": FeatureDraws("input", "MΩ", weights @ resistance_row(design, step_ms)),
+        "membrane_time_constant": FeatureDraws("input", "ms", _time_constants(weights, design)),
+        "offset": FeatureDraws("", "mV", weights[:, design.columns["offset"].start]),
+    }
+    if "electrode" in design.columns:
+        found["electrode_resistance"] = FeatureDraws(
+            "", "MΩ", weights[:, design.columns["electrode"].start]
+        )
+    if design.after_spike is not None:
+        found |= _after_spike(weights, design, report_at_ms)
+    return found
+
+
+def _time_constants(weights: FloatArray, design: VoltageDesign) -> FloatArray:
+    lags = kernel_lags(design, "input")
+    curves = weights @ kernel_rows(design, "input", lags).T
+    spacing = np.diff(lags, prepend=0.0)
+    variance = curves.var(axis=0)
+    # Where the kernel is pinned to zero its variance vanishes; such lags must not decide the fit.
+    variance = np.maximum(variance, np.median(variance))
+    return fit_exponentials(lags, curves, spacing / np.where(variance > 0, variance, 1.0))
+
+
+def fit_exponentials(lags_ms: FloatArray, curves: FloatArray, weight: FloatArray) -> FloatArray:
+    """Fit ``a·exp(−s/τ)`` to many curves by weighted least squares.
+
+    Parameters
+    ----------
+    lags_ms
+        Shape (n,), ms.
+    curves
+        Shape (D, n).
+    weight
+        Weight of each lag, shape (n,).
+
+    Returns
+    -------
+    τ of each curve in ms, shape (D,): the best of a fine grid, then Gauss–Newton in (a, log τ).
+    """
+    grid = np.geomspace(lags_ms[0], 3 * lags_ms[-1], 150)
+    shapes = np.exp(-lags_ms[:, None] / grid)
+    projection = np.maximum((curves * weight) @ shapes, 0.0)
+    explained = projection**2 / (weight @ shapes**2)
+    tau = grid[np.argmax(explained, axis=1)]
+    for _ in range(8):
+        shape = np.exp(-lags_ms / tau[:, None])
+        slope = shape * lags_ms / tau[:, None]
+        aa, ab, bb = (shape**2) @ weight, (shape * slope) @ weight, (slope**2) @ weight
+        a = ((curves * shape) @ weight) / aa
+        misfit = ((curves - a[:, None] * shape) * slope) @ weight
+        # With the amplitude eliminated, the step in log τ; short, so that it stays on the grid.
+        curvature = a * (bb - ab**2 / aa)
+        step = np.divide(misfit, curvature, out=np.zeros_like(misfit), where=curvature != 0)
+        tau = np.clip(tau * np.exp(np.clip(step, -0.1, 0.1)), grid[0], grid[-1])
+    return tau
+
+
+def _after_spike(
+    weights: FloatArray, design: VoltageDesign, report_at_ms: tuple[float, ...]
+) -> dict[str, FeatureDraws]:
+    lags = kernel_lags(design, "after_spike")
+    lags = lags[identified(design, "after_spike", lags)]
+    curves = weights @ kernel_rows(design, "after_spike", lags).T
+    mean = curves.mean(axis=0)
+    lowest = int(np.argmin(mean))
+    highest = lowest + int(np.argmax(mean[lowest:]))
+    kernel = "after_spike"
+    found = {
+        "after_spike_minimum": FeatureDraws(kernel, "mV", curves[:, lowest]),
+        "after_spike_minimum_time": FeatureDraws(kernel, "ms", lags[np.argmin(curves, axis=1)]),
+        "after_spike_peak": FeatureDraws(kernel, "mV", curves[:, highest]),
+        "after_spike_peak_time": FeatureDraws(
+            kernel, "ms", lags[lowest + np.argmax(curves[:, lowest:], axis=1)]
+        ),
+        "after_spike_peak_probability": FeatureDraws(
+            kernel, "1", has_bump(lags[lowest:], curves[:, lowest:]), is_probability=True
+        ),
+    }
+    for lag in _reported_lags(design, report_at_ms):
+        at = weights @ kernel_rows(design, kernel, np.array([lag]))[0]
+        found[f"after_spike_at_{lag:g}ms"] = FeatureDraws(kernel, "mV", at)
+    return found
+
+
+def has_bump(lags_ms: FloatArray, curves: FloatArray) -> FloatArray:
+    """Whether each curve exceeds `BUMP_MV` for at least `BUMP_MS` without a break, 0 or 1.
+
+    Parameters
+    ----------
+    lags_ms
+        Shape (n,), ms.
+    curves
+        Shape (D, n), mV.
+    """
+    longest = np.zeros(len(curves))
+    run = np.zeros(len(curves))
+    spacing = np.diff(lags_ms, prepend=lags_ms[0])
+    for above, width in zip((curves > BUMP_MV).T, spacing, strict=True):
+        # A run lasts from its first to its last lag.
+        run = np.where(above, np.where(np.isnan(run), 0.0, run + width), np.nan)
+        longest = np.fmax(longest, run)
+    return (longest >= BUMP_MS).astype(float)
+
+
+def _reported_lags(design: VoltageDesign, report_at_ms: tuple[float, ...]) -> FloatArray:
+    lags = np.array(report_at_ms, dtype=np.float64)
+    assert design.after_spike is not None
+    inside = identified(design, "after_spike", lags) & (lags < design.after_spike.duration_ms)
+    return lags[inside]

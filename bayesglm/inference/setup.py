@@ -1,0 +1,177 @@
+"""From settings and recordings to the design and the digest: what the user left open is filled
+from the data.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from bayesglm.kernels.basis import KernelSpec
+from bayesglm.kernels.design import VoltageDesign, default_row_ms
+from bayesglm.likelihood.calibration import (
+    LeastSquares,
+    correlation_time_ms,
+    least_squares,
+    with_sweep_offsets,
+)
+from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.voltage import voltage_digest
+from bayesglm.models.cell import conditional_weights, voltage_evidence
+from bayesglm.models.priors import WeightPrior, weight_prior
+from bayesglm.recording.current import find_steps
+from bayesglm.recording.recording import FloatArray, Recording
+from bayesglm.recording.settings import KernelSection, Settings
+from bayesglm.recording.steps import membrane_time_constant
+
+#: Input kernel: this many membrane time constants, within these bounds, ms.
+_TIME_CONSTANTS = 5.0
+_INPUT_BOUNDS_MS = (50.0, 400.0)
+_AFTER_SPIKE_MS = 300.0
+#: Of what a sweep has, a kernel may take this share by default.
+_SWEEP_SHARE = 0.5
+
+#: Blocks are at least this long, ms, this many correlation times, and at most this many.
+_BLOCK_MS = 1000.0
+_CORRELATION_TIMES = 20.0
+_MOST_BLOCKS = 200
+
+
+def common_row_ms(recordings: Sequence[Recording], settings: Settings) -> float:
+    """Length of a row, ms: as set, else the smallest one that suits the coarsest recording."""
+    if settings.model.row_ms is not None:
+        return settings.model.row_ms
+    return default_row_ms(max(recording.step_ms for recording in recordings))
+
+
+def resolve_design(recordings: Sequence[Recording], settings: Settings) -> VoltageDesign:
+    """Fill in row length and durations.
+
+    Parameters
+    ----------
+    recordings
+        Recordings of one cell with spikes found and selection applied.
+    settings
+        Durations that are None are filled: the input kernel lasts five membrane time constants
+        within 50–400 ms, the after-spike kernel 300 ms, both at most half the longest sweep.
+
+    Returns
+    -------
+    VoltageDesign
+
+    """
+    longest = max(
+        sweep.n_samples * recording.step_ms
+        for recording in recordings
+        for sweep in recording.sweeps
+    )
+    room = _SWEEP_SHARE * longest
+    sections = settings.kernels
+    after_ms = sections.after_spike.duration_ms or min(_AFTER_SPIKE_MS, room)
+    spikes = sum(recording.n_spikes for recording in recordings)
+    longest_input = min(_INPUT_BOUNDS_MS[1], room)
+
+    def design(input_ms: float) -> VoltageDesign:
+        return VoltageDesign(
+            input=_spec(sections.input, input_ms),
+            after_spike=_spec(sections.after_spike, after_ms) if spikes else None,
+            electrode=sections.electrode.include,
+            row_ms=common_row_ms(recordings, settings),
+            spike_window_ms=settings.model.spike_window_ms,
+        )
+
+    if sections.input.duration_ms is not None:
+        return design(sections.input.duration_ms)
+    tau = _time_constant_from_steps(recordings)
+    if tau is None:
+        tau = _time_constant_from_fit(recordings, design(longest_input), settings)
+    lower = min(_INPUT_BOUNDS_MS[0], room)
+    return design(float(np.round(np.clip(_TIME_CONSTANTS * tau, lower, longest_input))))
+
+
+def make_digest(
+    recordings: Sequence[Recording], design: VoltageDesign, prior: WeightPrior, settings: Settings
+) -> tuple[VoltageDigest, LeastSquares]:
+    """Reduce the recordings to units that are independent, and fit them.
+
+    Sweeps are the units of step protocols, since a step takes up a sweep. Otherwise sweeps are
+    cut into blocks of at least 1 s and 20 correlation times of the residual.
+
+    Parameters
+    ----------
+    recordings
+        Recordings of one cell.
+    design
+        The linear model.
+    prior
+        Prior of the weights; it scales them.
+    settings
+        ``model.units``, ``model.block_ms`` and ``model.sweep_offsets``.
+
+    Returns
+    -------
+    (digest, fit)
+    """
+    units, asked_ms = settings.model.units, settings.model.block_ms
+    if units == "auto":
+        stepped = all(find_steps(recording) for recording in recordings)
+        units = "sweep" if stepped and asked_ms is None else "block"
+    if units == "sweep":
+        digest = voltage_digest(recordings, design, None)
+        return digest, fit_digest(digest, prior.root, settings)
+    total_ms = sum(recording.seconds for recording in recordings) * 1e3
+    block_ms = asked_ms or max(_BLOCK_MS, total_ms / _MOST_BLOCKS)
+    digest = voltage_digest(recordings, design, block_ms)
+    fit = fit_digest(digest, prior.root, settings)
+    if asked_ms is None:
+        needed = _CORRELATION_TIMES * correlation_time_ms(digest, fit)
+        factor = int(np.ceil(needed / block_ms))
+        if factor > 1:
+            digest = digest.merge(factor)
+            fit = fit_digest(digest, prior.root, settings)
+    return digest, fit
+
+
+def fit_digest(digest: VoltageDigest, scale: FloatArray, settings: Settings) -> LeastSquares:
+    """Least squares, with sweep offsets where the settings want them."""
+    if settings.model.sweep_offsets:
+        return with_sweep_offsets(digest, scale)
+    return least_squares(digest, scale)
+
+
+def _spec(section: KernelSection, duration_ms: float) -> KernelSpec:
+    return KernelSpec(duration_ms, section.weights, section.warp_ms)
+
+
+def _time_constant_from_steps(recordings: Sequence[Recording]) -> float | None:
+    found = [tau for r in recordings if (tau := membrane_time_constant(r)) is not None]
+    return float(np.median(found)) if found else None
+
+
+def _time_constant_from_fit(
+    recordings: Sequence[Recording], design: VoltageDesign, settings: Settings
+) -> float:
+    """Membrane time constant from a first fit with the longest input kernel, ms."""
+    # Features are read further down the house; the area over the height of κ is enough here.
+    prior = weight_prior(design, settings.priors)
+    digest = voltage_digest(recordings, design, None)
+    fit = fit_digest(digest, prior.root, settings)
+    evidence = voltage_evidence(fit.weights, _tempered(digest, fit), fit.rank, 1.0, prior)
+    mean, _ = conditional_weights(evidence, prior.sd_scale[None] / 4, np.ones(1))
+    weights = (prior.mean + prior.root @ mean[0])[design.columns["input"]]
+    lags = np.arange(1, int(design.input.duration_ms) + 1, dtype=np.float64)
+    kernel = np.maximum(design.input.evaluate(lags) @ weights, 0.0)
+    if kernel.sum() <= 0:
+        return design.input.duration_ms / _TIME_CONSTANTS
+    # The mean lag of an exponential is its time constant, and noise at long lags pulls it up
+    # rather than down: too long a kernel costs precision, too short a one biases.
+    return float(kernel @ lags / kernel.sum())
+
+
+def _tempered(digest: VoltageDigest, fit: LeastSquares) -> FloatArray:
+    """Precision of the weights as if rows a correlation time apart were independent."""
+    rows_apart = max(1.0, 2 * correlation_time_ms(digest, fit) / digest.design.row_ms)
+    back = np.linalg.pinv(fit.basis)
+    precision: FloatArray = back.T @ back / max(fit.residual_variance * rows_apart, 1e-12)
+    return precision

@@ -1,0 +1,51 @@
+"""From the entry of a cell in a study to its recordings, ready to be fitted."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+from bayesglm.recording.reading import read_recording
+from bayesglm.recording.recording import Recording
+from bayesglm.recording.selection import refuse_defects, select
+from bayesglm.recording.settings import SelectSection, Settings
+from bayesglm.recording.spikes import detect_spikes
+from bayesglm.recording.study import CellEntry, RecordingEntry
+
+
+def load_cell(entry: CellEntry, settings: Settings) -> tuple[Recording, ...]:
+    """Read what is fitted of a cell: spikes found, selection applied, defects refused.
+
+    Parameters
+    ----------
+    entry
+        The cell's entry in the study; excluded and held-out recordings are passed over.
+    settings
+        Spike detection and selection.
+
+    Returns
+    -------
+    tuple of Recording
+        Empty where every recording is excluded or held out.
+
+    Raises
+    ------
+    InputError
+        If a file cannot be read, nothing is left of it, or what is left has NaN or jumps.
+    """
+    recordings = []
+    for one in entry.recordings:
+        if one.exclude or one.role != "fit":
+            continue
+        recording = select(load_recording(one, settings), settings.recording.select)
+        refuse_defects(recording)
+        recordings.append(recording)
+    return tuple(recordings)
+
+
+def load_recording(entry: RecordingEntry, settings: Settings) -> Recording:
+    """Read one file with its spikes found; only the sweeps that belong to the cell."""
+    recording = detect_spikes(read_recording(entry.path), settings.recording)
+    if entry.sweeps is None:
+        return recording
+    own = select(recording, SelectSection(sweeps=entry.sweeps))
+    return replace(own, left_out=recording.left_out)

@@ -1,0 +1,1 @@
+"""What a fit looks like to people: figures, sentences and one page that opens anywhere."""
