@@ -140,4 +140,4 @@ def _compiled_run(
         constrained = jax.vmap(info.postprocess_fn(data))(z)
         return (constrained, *statistics)
 
-    return jax.lax.map(run_chain, keys)  # type: ignore[no-any-return]
+    return jax.lax.map(run_chain, keys)

@@ -9,7 +9,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from bayesglm.kernels.basis import KernelSpec
-from bayesglm.kernels.design import VoltageDesign, default_row_ms
+from bayesglm.kernels.design import VoltageDesign, default_row_ms, samples_per_row
 from bayesglm.likelihood.calibration import (
     LeastSquares,
     correlation_time_ms,
@@ -17,13 +17,14 @@ from bayesglm.likelihood.calibration import (
     with_sweep_offsets,
 )
 from bayesglm.likelihood.digest import VoltageDigest
-from bayesglm.likelihood.voltage import voltage_digest
+from bayesglm.likelihood.voltage import refuse_long_kernels, voltage_digest
 from bayesglm.models.cell import conditional_weights, voltage_evidence
 from bayesglm.models.priors import WeightPrior, weight_prior
-from bayesglm.recording.current import find_steps
+from bayesglm.recording.loading import load_cell
 from bayesglm.recording.recording import FloatArray, Recording
 from bayesglm.recording.settings import KernelSection, Settings
 from bayesglm.recording.steps import membrane_time_constant
+from bayesglm.recording.study import CellEntry
 
 #: Input kernel: this many membrane time constants, within these bounds, ms.
 _TIME_CONSTANTS = 5.0
@@ -37,12 +38,42 @@ _BLOCK_MS = 1000.0
 _CORRELATION_TIMES = 20.0
 _MOST_BLOCKS = 200
 
+#: Current stands still where its sd over this many ms is below this share of its spread.
+_STILL_MS = 20.0
+_STILL_SHARE = 0.05
+
 
 def common_row_ms(recordings: Sequence[Recording], settings: Settings) -> float:
     """Length of a row, ms: as set, else the smallest one that suits the coarsest recording."""
     if settings.model.row_ms is not None:
         return settings.model.row_ms
     return default_row_ms(max(recording.step_ms for recording in recordings))
+
+
+def refuse_unusable(entry: CellEntry, settings: Settings) -> bool:
+    """Read a cell and refuse what a fit would refuse, before anything is written.
+
+    Returns
+    -------
+    bool
+        Whether the cell has a recording to fit.
+
+    Raises
+    ------
+    InputError
+        If a recording cannot be read or used, a row is not a whole number of steps, or a kernel
+        whose duration is stated is longer than the longest sweep.
+    """
+    recordings = load_cell(entry, settings)
+    if not recordings:
+        return False
+    stated = {"input": settings.kernels.input, "after_spike": settings.kernels.after_spike}
+    durations = {name: one.duration_ms for name, one in stated.items() if one.duration_ms}
+    row_ms = common_row_ms(recordings, settings)
+    for recording in recordings:
+        samples_per_row(row_ms, recording.step_ms, recording.source)
+        refuse_long_kernels(recording, durations)
+    return True
 
 
 def resolve_design(recordings: Sequence[Recording], settings: Settings) -> VoltageDesign:
@@ -115,7 +146,7 @@ def make_digest(
     """
     units, asked_ms = settings.model.units, settings.model.block_ms
     if units == "auto":
-        stepped = all(find_steps(recording) for recording in recordings)
+        stepped = all(_mostly_constant(recording) for recording in recordings)
         units = "sweep" if stepped and asked_ms is None else "block"
     if units == "sweep":
         digest = voltage_digest(recordings, design, None)
@@ -138,6 +169,17 @@ def fit_digest(digest: VoltageDigest, scale: FloatArray, settings: Settings) -> 
     if settings.model.sweep_offsets:
         return with_sweep_offsets(digest, scale)
     return least_squares(digest, scale)
+
+
+def _mostly_constant(recording: Recording) -> bool:
+    """Whether the current stands still for most of the time, as in a protocol of steps."""
+    samples = max(2, round(_STILL_MS / recording.step_ms))
+    pieces = []
+    for sweep in recording.sweeps:
+        whole = sweep.n_samples // samples * samples
+        pieces.append(sweep.current[:whole].reshape(-1, samples).std(axis=1))
+    spread = np.std(np.concatenate([sweep.current for sweep in recording.sweeps]))
+    return bool(np.mean(np.concatenate(pieces) < _STILL_SHARE * spread) > 0.5)
 
 
 def _spec(section: KernelSection, duration_ms: float) -> KernelSpec:

@@ -204,21 +204,26 @@ class VoltageDesign:
         return kernels
 
     def samples_per_row(self, step_ms: float) -> int:
-        """Samples averaged into a row.
+        """Samples averaged into a row; see `samples_per_row`."""
+        return samples_per_row(self.row_ms, step_ms)
 
-        Raises
-        ------
-        InputError
-            If a row is not a whole number of steps.
-        """
-        ratio = self.row_ms / step_ms
-        m = round(ratio)
-        if m < 1 or abs(ratio - m) > 1e-6 * ratio:
-            raise InputError(
-                f"row_ms is {self.row_ms:g} ms, which is not a whole multiple of the recorded step "
-                f"of {step_ms:g} ms; set model.row_ms to one"
-            )
-        return m
+
+def samples_per_row(row_ms: float, step_ms: float, source: str = "recording") -> int:
+    """Samples averaged into a row.
+
+    Raises
+    ------
+    InputError
+        If a row is not a whole number of steps; the message names `source`.
+    """
+    ratio = row_ms / step_ms
+    m = round(ratio)
+    if m < 1 or abs(ratio - m) > 1e-6 * ratio:
+        raise InputError(
+            f"{source}: a row of {row_ms:g} ms is not a whole number of steps of {step_ms:g} ms; "
+            "set model.row_ms to a multiple of every recording's step"
+        )
+    return m
 
 
 def default_row_ms(step_ms: float, at_least: float = 0.5) -> float:

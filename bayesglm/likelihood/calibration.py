@@ -248,7 +248,7 @@ def calibrate(
     n_units, rank = digest.n_units, fit.rank
     jackknife = (n_units - 1) / n_units * changes.T @ changes + between[1]
     spectral, spectrum = _spectral_covariance(digest, fit)
-    spectral = spectral + between[0]
+    spectral = np.asarray(spectral + between[0])
     ratio = inflation or _kernel_ratio(digest.design, fit, jackknife, spectral)
     if inflation is None:
         inflation = {name: max(1.0, value) for name, value in ratio.items()}

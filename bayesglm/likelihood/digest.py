@@ -11,6 +11,8 @@ from __future__ import annotations
 
 import hashlib
 import json
+import zipfile
+import zlib
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
@@ -24,6 +26,9 @@ from bayesglm.kernels.design import VoltageDesign
 from bayesglm.recording.recording import FloatArray, IntArray
 
 _VERSION: Final = 1
+
+#: What NumPy raises for a file that is no NPZ, or one cut short.
+_UNREADABLE: Final = (OSError, EOFError, ValueError, TypeError, zipfile.BadZipFile, zlib.error)
 
 #: Upper edges of the frequency bands in Hz: half octaves from 0.5 Hz. The first band holds
 #: what is slower than that, the last what is faster.
@@ -144,10 +149,10 @@ class VoltageDigest:
             If the file is no digest, or one of another version.
         """
         try:
-            with np.load(path, allow_pickle=False) as file:
+            with path.open("rb") as stream, np.load(stream, allow_pickle=False) as file:
                 content = {name: file[name] for name in file.files}
             version = int(content["version"])
-        except (OSError, ValueError, KeyError) as error:
+        except (*_UNREADABLE, KeyError) as error:
             raise InputError(f"{path}: is not a digest; make it anew with bayesglm fit") from error
         if version != _VERSION:
             raise InputError(

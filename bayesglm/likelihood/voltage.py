@@ -9,7 +9,7 @@ unit's.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import partial
 
@@ -75,7 +75,7 @@ def _recording_digest(
     recording: Recording, design: VoltageDesign, block_ms: float | None
 ) -> VoltageDigest:
     m = design.samples_per_row(recording.step_ms)
-    _refuse_long_kernels(recording, design)
+    refuse_long_kernels(recording, {n: k.duration_ms for n, k in design.kernels.items()})
     filters = _filters(design, recording.step_ms, m)
     common = common_current(recording)
     units: list[dict[str, object]] = []
@@ -184,8 +184,7 @@ def kept_rows(sweep: Sweep, design: VoltageDesign, step_ms: float, m: int) -> Bo
     for spike in sweep.spikes if sweep.spikes is not None else ():
         keep[max(0, spike - reach[0]) : spike + reach[1] + 1] = False
     rows = len(keep) // m
-    whole: BoolArray = keep[: rows * m].reshape(rows, m).all(axis=1)
-    return whole
+    return np.asarray(keep[: rows * m].reshape(rows, m).all(axis=1), dtype=np.bool_)
 
 
 def predict_rows(
@@ -221,13 +220,20 @@ def predict_rows(
     return out
 
 
-def _refuse_long_kernels(recording: Recording, design: VoltageDesign) -> None:
+def refuse_long_kernels(recording: Recording, durations_ms: Mapping[str, float]) -> None:
+    """Refuse kernels that are longer than the longest sweep.
+
+    Raises
+    ------
+    InputError
+        Naming the recording, the key and the longest sweep.
+    """
     longest = max(sweep.n_samples for sweep in recording.sweeps) * recording.step_ms
-    for name, spec in design.kernels.items():
-        if spec.duration_ms > longest:
+    for name, duration in durations_ms.items():
+        if duration > longest:
             raise InputError(
-                f"{recording.source}: kernels.{name}.duration_ms is {spec.duration_ms:g} ms, but "
-                f"the longest sweep lasts {longest:g} ms; set it to at most {longest / 2:g}"
+                f"{recording.source}: kernels.{name}.duration_ms is {duration:g} ms, but the "
+                f"longest sweep lasts {longest:g} ms; set it to at most {longest / 2:g}"
             )
 
 

@@ -22,7 +22,7 @@ from numpy.typing import NDArray
 
 from bayesglm.errors import InputError
 
-FloatArray = NDArray[np.float64]
+FloatArray = NDArray[np.floating]
 
 #: What stands for a missing value: an empty field, and what common programs write for one.
 MISSING = ("", "NaN", "nan", "NA")

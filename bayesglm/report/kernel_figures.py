@@ -46,7 +46,7 @@ def draw_kernels(fit: CellFit, truth: Truth | None, width_mm: float) -> Figure:
     names = drawn_kernels(fit)
     columns = len(names) if width_mm > 120 else 1
     rows = -(-len(names) // columns)
-    margins = Margins(left=13.0, top=7.0, bottom=21.0 if columns > 1 else 28.0, down=16.0)
+    margins = Margins(left=13.0, top=7.0, bottom=20.0 if width_mm > 120 else 36.0, down=16.0)
     height = margins.top + margins.bottom + rows * 56.0 + (rows - 1) * margins.down
     figure = new_figure(width_mm, height)
     grid = panels(figure, rows, columns, margins)
@@ -54,11 +54,11 @@ def draw_kernels(fit: CellFit, truth: Truth | None, width_mm: float) -> Figure:
         axes = grid[place // columns][place % columns][0]
         _kernel_panel(axes, fit.kernels[name], fit.splits.get(name), truth)
         if name == "after_spike":
-            _shade_window(axes, fit.design.spike_window_ms[1])
+            axes.axvspan(0, fit.design.spike_window_ms[1], color=PALE, linewidth=0, zorder=0)
     figure.legend(
         handles=_legend(fit, truth),
         loc="lower center",
-        ncols=2 if width_mm > 120 else 1,
+        ncols=3 if width_mm > 120 else 1,
         columnspacing=3.0,
     )
     return figure
@@ -106,9 +106,15 @@ def _kernel_panel(axes: Axes, band: Band, split: Split | None, truth: Truth | No
     if handles:
         positive = float(np.nanmean(band.mean)) > 0
         axes.legend(
-            handles=handles, loc="upper right" if positive else "lower right", title="from part of the drive alone",
-            title_fontsize=7, alignment="left", frameon=True, edgecolor="none", framealpha=0.8,
-        )  # fmt: skip
+            handles=handles,
+            loc="upper right" if positive else "lower right",
+            title="from part of the drive alone",
+            title_fontsize=7,
+            alignment="left",
+            frameon=True,
+            edgecolor="none",
+            framealpha=0.8,
+        )
 
 
 def _range_curves(axes: Axes, band: Band, split: Split | None) -> list[Line2D]:
@@ -142,24 +148,16 @@ def _limited(wanted: tuple[float, float], shown: tuple[float, float]) -> tuple[f
     return max(wanted[0], shown[0] - room), min(wanted[1], shown[1] + room)
 
 
-def _shade_window(axes: Axes, window_ms: float) -> None:
-    axes.axvspan(0, window_ms, color=PALE, linewidth=0, zorder=0)
-    axes.text(
-        window_ms * 1.5, 0.98, "◂ spike window: not identified", fontsize=7.0, color=GREY,
-        transform=axes.get_xaxis_transform(), va="top",
-    )  # fmt: skip
-
-
 def _legend(fit: CellFit, truth: Truth | None) -> list[Line2D | Patch]:
     level = f"{100 * next(iter(fit.kernels.values())).level:.0f} %"
     handles: list[Line2D | Patch] = [
         Line2D([], [], color=BLUE, linewidth=1.6, label="posterior mean"),
         Patch(color=BLUE, alpha=_BAND_ALPHA, linewidth=0, label=f"{level} band, lag by lag"),
         Line2D([], [], color=BLUE, linewidth=0.5, label=f"{level} band of the whole curve"),
-        Line2D(
-            [], [], label=f"{level} band if noise were white (not to be believed)", **_WHITE_STYLE
-        ),
+        Line2D([], [], label=f"{level} band if noise were white", **_WHITE_STYLE),
     ]
+    if "after_spike" in fit.kernels:
+        handles.append(Patch(color=PALE, linewidth=0, label="spike window: not identified"))
     if truth is not None and truth.curves:
         handles.append(Line2D([], [], label="truth of the simulation", **_TRUTH_STYLE))
     return handles

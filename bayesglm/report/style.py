@@ -23,6 +23,7 @@ from bayesglm.recording.recording import FloatArray
 
 INK: Final = "#1a1a1a"
 GREY: Final = "#767676"
+LIGHT: Final = "#a6a6a6"
 PALE: Final = "#e4e4e4"
 ORANGE: Final = "#e69f00"
 SKY: Final = "#56b4e9"

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -11,14 +12,14 @@ from matplotlib.figure import Figure
 
 from bayesglm.checks.residuals import SweepRows
 from bayesglm.inference.results import CellFit
-from bayesglm.recording.recording import FloatArray, Recording, Sweep
+from bayesglm.recording.recording import BoolArray, FloatArray, Recording, Sweep
 from bayesglm.recording.steps import StepMeasure, measure_steps
 from bayesglm.recording.wording import fixed
 from bayesglm.report.predicted import Place, mean_current_nA, spread, sweeps_of, times_of
 from bayesglm.report.style import (
     BLUE,
-    GREY,
     INK,
+    LIGHT,
     PALE,
     VERMILLION,
     Margins,
@@ -33,15 +34,23 @@ from bayesglm.report.style import (
 _MOST_SHOWN: Final = 8
 #: Of a long sweep without steps only so much is shown beside its prediction, from its middle, so
 #: that single responses can be seen.
-_CLOSE_UP_MS: Final = 2500.0
+_CLOSE_UP_MS: Final = 1500.0
 
 Stack = Sequence[Axes]
+
+
+@dataclass(frozen=True)
+class Shown:
+    """A sweep drawn beside its prediction: what to call it, and how much of it to draw, ms."""
+
+    label: str
+    longest_ms: float = np.inf
 
 
 def draw_traces(fit: CellFit, width_mm: float) -> Figure:
     """Draw up to eight sweeps as recorded: voltage with its spikes marked, current below."""
     shown = _by_drive(fit, _MOST_SHOWN)
-    columns = min(len(shown), 4 if width_mm > 120 else 2)
+    columns = min(-(-len(shown) // 2), 4 if width_mm > 120 else 2)
     margins = Margins(left=15.0, across=4.0, top=8.0, bottom=9.0, down=11.0)
     figure, stacks = _stacked(width_mm, 39.0, len(shown), columns, margins, (3.0, 1.0))
     for place, item in enumerate(shown):
@@ -55,7 +64,7 @@ def draw_traces(fit: CellFit, width_mm: float) -> Figure:
 
 
 def draw_prediction(
-    predicted: Mapping[Place, SweepRows], chosen: Mapping[Place, str], width_mm: float
+    predicted: Mapping[Place, SweepRows], chosen: Mapping[Place, Shown], width_mm: float
 ) -> Figure:
     """Draw voltage and prediction of chosen sweeps, with the residual below.
 
@@ -71,9 +80,9 @@ def draw_prediction(
     columns = 2 if width_mm > 120 and len(chosen) > 1 else 1
     margins = Margins(left=15.0, across=12.0, top=11.0, bottom=9.0, down=11.0)
     figure, stacks = _stacked(width_mm, 46.0, len(chosen), columns, margins, (2.6, 1.0))
-    for stack, (item, label) in zip(stacks, chosen.items(), strict=True):
-        _predicted_sweep(stack, predicted[item])
-        stack[0].set_title(label)
+    for stack, (item, shown) in zip(stacks, chosen.items(), strict=True):
+        _predicted_sweep(stack, predicted[item], shown.longest_ms)
+        stack[0].set_title(shown.label)
     limit = max(abs(y) for stack in stacks for y in stack[1].get_ylim())
     for stack in stacks:
         stack[1].set_ylim(-limit, limit)
@@ -83,7 +92,7 @@ def draw_prediction(
     return figure
 
 
-def representative_sweeps(fit: CellFit) -> dict[Place, str]:
+def representative_sweeps(fit: CellFit) -> dict[Place, Shown]:
     """Choose sweeps that show the fit at its extremes, with what to call them.
 
     Of steps: the lowest level, the one nearest the holding current, the lowest at which the cell
@@ -94,10 +103,10 @@ def representative_sweeps(fit: CellFit) -> dict[Place, str]:
         chosen = _step_sweeps(index, recording)
         if chosen:
             return chosen
-    return {item: _sweep_label(fit, item) for item in _by_drive(fit, 4)}
+    return {item: Shown(_sweep_label(fit, item), _CLOSE_UP_MS) for item in _by_drive(fit, 4)}
 
 
-def _step_sweeps(index: int, recording: Recording) -> dict[Place, str]:
+def _step_sweeps(index: int, recording: Recording) -> dict[Place, Shown]:
     ordered = sorted(_varied_steps(recording), key=lambda one: one.step.level_nA)
     if not ordered:
         return {}
@@ -107,7 +116,7 @@ def _step_sweeps(index: int, recording: Recording) -> dict[Place, str]:
     named = {}
     for number, one in sorted(chosen.items(), key=lambda item: item[1].step.level_nA):
         first = ", the lowest with spikes" if spiking and one is spiking[0] else ""
-        named[(index, number)] = f"Step to {fixed(one.step.level_nA * 1e3, 0)} pA{first}"
+        named[(index, number)] = Shown(f"Step to {fixed(one.step.level_nA * 1e3, 0)} pA{first}")
     return named
 
 
@@ -126,11 +135,11 @@ def _varied_steps(recording: Recording) -> list[StepMeasure]:
 
 
 def _by_drive(fit: CellFit, at_most: int) -> list[Place]:
-    """Take sweeps evenly from the lowest to the highest mean current."""
+    """Take sweeps evenly from the lowest to the highest mean current, in the order of the fit."""
     ordered = sorted(
         sweeps_of(fit), key=lambda item: mean_current_nA(fit.recordings[item[0]], item[1])
     )
-    return spread(ordered, at_most)
+    return sorted(spread(ordered, at_most))
 
 
 def _sweep_label(fit: CellFit, item: Place) -> str:
@@ -190,32 +199,41 @@ def _mark_spikes(axes: Axes, times_ms: FloatArray) -> None:
     )
 
 
-def _predicted_sweep(stack: Stack, one: SweepRows) -> None:
-    here = _close_up(one.time_ms)
+def _predicted_sweep(stack: Stack, one: SweepRows, longest_ms: float) -> None:
+    here = _middle(one.time_ms, longest_ms)
     times, kept, columns = one.time_ms[here], one.kept[here], points_across(stack[0])
     voltage = np.where(kept, one.voltage[here], np.nan)
     predicted = np.where(kept, one.prediction[here], np.nan)
     for values, color, width, label in (
-        (voltage, GREY, 0.7, "recorded"),
-        (predicted, VERMILLION, 1.0, "predicted"),
+        (voltage, LIGHT, 1.5, "recorded"),
+        (predicted, VERMILLION, 0.8, "predicted"),
     ):
         stack[0].plot(*envelope(times, values, columns), color=color, linewidth=width, label=label)
     stack[1].plot(*envelope(times, one.residual[here], columns), color=BLUE, linewidth=0.5)
     stack[1].axhline(0.0, color=INK, linewidth=0.5)
     for axes in stack:
-        axes.fill_between(
-            times, 0, 1, where=~kept, step="mid", color=PALE, linewidth=0, zorder=0,
+        axes.broken_barh(
+            _gaps(times, kept), (0.0, 1.0), color=PALE, linewidth=0, zorder=0,
             transform=axes.get_xaxis_transform(), label="left out of the fit",
         )  # fmt: skip
     # The first row's middle lies half a row after the start of the sweep.
     _dress(stack, (times[0] if here.start else 0.0, times[-1]), n_ticks=6)
 
 
-def _close_up(times_ms: FloatArray) -> slice:
-    """Part of a sweep that is drawn: all of it where it is not much longer than a close-up."""
+def _middle(times_ms: FloatArray, longest_ms: float) -> slice:
+    """Middle part of a sweep, all of it where it is not much longer than that."""
     n = len(times_ms)
-    shown = round(n * _CLOSE_UP_MS / times_ms[-1])
+    shown = min(n, int(np.searchsorted(times_ms, longest_ms)))
     return slice(0, n) if n <= 1.3 * shown else slice((n - shown) // 2, (n + shown) // 2)
+
+
+def _gaps(times_ms: FloatArray, kept: BoolArray) -> list[tuple[float, float]]:
+    """Start and length in ms of each run of rows that were left out."""
+    edges = np.diff(np.concatenate([[False], ~kept, [False]]).astype(np.int8))
+    row_ms = float(times_ms[1] - times_ms[0]) if len(times_ms) > 1 else 1.0
+    starts, stops = np.flatnonzero(edges == 1), np.flatnonzero(edges == -1)
+    left = times_ms[starts] - row_ms / 2
+    return list(zip(left.tolist(), ((stops - starts) * row_ms).tolist(), strict=True))
 
 
 def _dress(stack: Stack, span_ms: tuple[float, float], n_ticks: int) -> None:
