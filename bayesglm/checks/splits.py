@@ -17,6 +17,7 @@ from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.models.cell import conditional_weights, voltage_evidence
 from bayesglm.models.priors import WeightPrior
 from bayesglm.recording.recording import FloatArray, IntArray
+from bayesglm.recording.wording import fixed
 
 #: Fewer exciting units than this cannot be cut into three ranges.
 FEWEST_UNITS = 6
@@ -89,10 +90,12 @@ def drive_ranges(digest: VoltageDigest, kernel: str) -> tuple[IntArray, ...]:
 def range_label(digest: VoltageDigest, units: IntArray) -> str:
     """Name a range of drive: ``50–125 pA``."""
     values, unit = drive(digest)
-    low, high = values[units].min(), values[units].max()
-    digits = 0 if unit == "pA" else 1
-    text = f"{low:.{digits}f}" if low == high else f"{low:.{digits}f}–{high:.{digits}f}"
-    return f"{text} {unit}".replace("-", "−")
+    low, high = float(values[units].min()), float(values[units].max())
+    digits = 0 if max(abs(low), abs(high)) >= 10 else 1
+    ends = [fixed(low, digits), fixed(high, digits)]
+    # A dash between numbers of which one is negative would be read as a minus.
+    dash = "–" if low >= 0 else " to "
+    return f"{dash.join(dict.fromkeys(ends))} {unit}"
 
 
 def estimate_part(

@@ -26,7 +26,7 @@ def check(
     quiet: Quiet = False,
     seed: Seed = None,
 ) -> None:
-    """Say what is on the trace and whether it can be fitted; exit 3 if it cannot."""
+    """Say what is on the trace and whether it can be fitted; exit 3 if not."""
     from bayesglm.cli.printing import print_reasons
     from bayesglm.recording.loading import load_recording
     from bayesglm.recording.quality import check_recording

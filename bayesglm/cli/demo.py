@@ -18,7 +18,7 @@ def demo(
     quiet: Quiet = False,
     seed: Annotated[int, typer.Option(help="Seed of the simulation and the fits.", min=0)] = 0,
 ) -> None:
-    """Make an invented study of six cells, check it, fit it, and print where its report is."""
+    """Make an invented study of six cells, check it, fit it, say where the report is."""
     refuse_full_folder(out)
 
     from bayesglm.checks.scenario import demo_cells

@@ -35,8 +35,7 @@ def fit(
     quiet: Quiet = False,
     seed: Seed = None,
 ) -> None:
-    """Fit every cell and write kernels, features, verdicts, figures and a page; exit 3 if a
-    verdict is failed."""
+    """Fit every cell; write kernels, features, verdicts, figures and a page."""
     refuse_full_folder(out)
     if observe is not None:
         assign = [*(assign or ()), f"model.observe={observe}"]

@@ -96,15 +96,21 @@ def progress_bar(steps: int, shown: bool) -> Iterator[Progress]:
         TextColumn("left"),
         TimeRemainingColumn(),
     )
-    with Progress(*columns, console=Console(stderr=True), disable=not shown) as bar:
-        task = bar.add_task("", total=steps)
-        started = False
+    bar = Progress(*columns, console=Console(stderr=True), disable=not shown)
+    task = bar.add_task("", total=steps)
+    started = False
 
-        def tell(stage: str) -> None:
-            nonlocal started
-            # A stage is done when the next one begins.
-            bar.update(task, description=stage, advance=1 if started else 0)
-            started = True
+    def tell(stage: str) -> None:
+        nonlocal started
+        # Not before the first stage: input that is refused leaves one line and no bar.
+        bar.start()
+        # A stage is done when the next one begins.
+        bar.update(task, description=stage, advance=1 if started else 0)
+        started = True
 
+    try:
         yield tell
-        bar.update(task, advance=1)
+        bar.update(task, description="done", advance=1)
+    finally:
+        if started:
+            bar.stop()

@@ -40,16 +40,16 @@ def print_reasons(title: str, reasons: Sequence[Reason]) -> None:
 
 
 def print_advice(console: Console, reasons: Sequence[Reason]) -> None:
-    """Print what each row means and its next command, ready to copy."""
-    for row in reasons:
+    """Print what each row means, and below those that share it the next command to try."""
+    for command in dict.fromkeys(row.command for row in reasons):
         console.print()
-        line = Text.assemble(
-            _severity(row.verdict), f" {row.check.replace('_', ' ')}: ", row.advice
-        )
-        console.print(line)
-        if row.command:
+        for row in reasons:
+            if row.command == command:
+                name = row.check.replace("_", " ")
+                console.print(Text.assemble(_severity(row.verdict), f" {name}: {row.advice}"))
+        if command:
             # Not wrapped: a command must be copied as one line.
-            console.print(Padding(Text(row.command), (0, 0, 0, 4)), soft_wrap=True)
+            console.print(Text(f"    {command}"), soft_wrap=True)
 
 
 def print_fit(fit: CellFit, sentences: Sequence[str]) -> None:

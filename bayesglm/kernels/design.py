@@ -10,7 +10,7 @@ average" into `m` short convolutions at the rate of the rows, done with one FFT 
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import partial
+from functools import lru_cache, partial
 
 import jax
 import jax.numpy as jnp
@@ -74,6 +74,7 @@ class RowFilter:
         return padded.reshape(-1, m)[:, ::-1]
 
 
+@lru_cache(maxsize=32)
 def row_filter(spec: KernelSpec, step_ms: float, samples_per_row: int, n_fft: int) -> RowFilter:
     """Build the filter of one kernel for one sampling step.
 

@@ -106,4 +106,3 @@ def _prefixed(progress: Callable[[str], None], name: str) -> Callable[[str], Non
         progress(f"{name}: {stage}")
 
     return tell
-

@@ -104,7 +104,7 @@ def _kernel_panel(axes: Axes, band: Band, split: Split | None, truth: Truth | No
     axes.set_ylim(_limited(axes.get_ylim(), shown))
     _dress(axes, band.kernel, lags[-1])
     if handles:
-        positive = float(np.nanmean(band.mean)) > 0
+        positive = float(np.nansum(band.mean)) > 0
         axes.legend(
             handles=handles,
             loc="upper right" if positive else "lower right",

@@ -21,7 +21,7 @@ from bayesglm.recording.recording import FloatArray, Recording, Sweep
 Place = tuple[int, int]
 
 _MOST_SAMPLES: Final = 2_000_000
-_MOST_SWEEPS: Final = 24
+_MOST_SWEEPS: Final = 12
 
 
 def sweeps_of(fit: CellFit) -> list[Place]:

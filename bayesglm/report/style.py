@@ -19,7 +19,7 @@ from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
-from bayesglm.recording.recording import FloatArray
+from bayesglm.recording.recording import FloatArray, IntArray
 
 INK: Final = "#1a1a1a"
 GREY: Final = "#767676"
@@ -167,37 +167,68 @@ def points_across(axes: Axes) -> int:
     return max(50, round(width_of(axes) * _POINTS_PER_MM))
 
 
-def envelope(times: FloatArray, values: FloatArray, columns: int) -> tuple[FloatArray, FloatArray]:
-    """Thin a trace to its minimum and maximum in each column, so that no spike is lost.
+def envelope(values: FloatArray, columns: int) -> IntArray:
+    """Choose the samples of a trace to draw: extremes of each column, so that no spike is lost.
 
     Parameters
     ----------
-    times, values
+    values
         The trace, shape (n,); values may be NaN.
     columns
         Number of columns.
 
     Returns
     -------
-    (times, values)
-        At most two points a column, in the order in which they were recorded.
+    Array of indices, sorted
+        At most two a column. Where little changes every change is kept instead, so that steps
+        of current have their edges.
     """
     n = len(values)
-    # Steps of current keep their edges: where little changes, every change is kept.
-    changes = np.flatnonzero(np.diff(values) != 0)
-    if len(changes) < columns:
-        places = np.unique(np.concatenate([[0], changes, changes + 1, [n - 1]]))
-        return times[places], values[places]
+    changed = values[1:] != values[:-1]
+    if np.count_nonzero(changed) < columns:
+        before = np.flatnonzero(changed)
+        return np.unique(np.concatenate([[0], before, before + 1, [n - 1]]))
     if n <= 2 * columns:
-        return times, values
+        return np.arange(n)
     width = -(-n // columns)
-    rest = -n % width
-    padded = np.append(values, np.full(rest, np.nan)).reshape(-1, width)
-    lowest = np.where(np.isnan(padded), np.inf, padded).argmin(axis=1)
-    highest = np.where(np.isnan(padded), -np.inf, padded).argmax(axis=1)
-    places = np.sort(np.column_stack([lowest, highest]), axis=1)
-    places = np.minimum(places + width * np.arange(len(padded))[:, None], n - 1).ravel()
-    return times[places], values[places]
+    whole = n // width * width
+    places = (
+        _extremes(values[:whole].reshape(-1, width)) + width * np.arange(whole // width)[:, None]
+    )
+    if whole == n:
+        return places.ravel()
+    return np.append(places.ravel(), whole + _extremes(values[None, whole:]).ravel())
+
+
+def _extremes(blocks: FloatArray) -> IntArray:
+    """Places of the extremes of each row of blocks, in the order of time, shape (rows, 2)."""
+    gone = np.isnan(blocks)
+    # Copies only where values are missing: a trace may be as long as a recording.
+    some = bool(gone.any())
+    lowest = (np.where(gone, np.inf, blocks) if some else blocks).argmin(axis=1)
+    highest = (np.where(gone, -np.inf, blocks) if some else blocks).argmax(axis=1)
+    places: IntArray = np.sort(np.column_stack([lowest, highest]), axis=1)
+    return places
+
+
+def plot_thinned(
+    axes: Axes, times: FloatArray, values: FloatArray, color: str, width: float, label: str = ""
+) -> None:
+    """Plot a trace with no more points than can be seen.
+
+    Parameters
+    ----------
+    axes
+        Where to.
+    times, values
+        The trace, shape (n,).
+    color, width
+        Of the line; the width in points.
+    label
+        For the legend; empty for none.
+    """
+    at = envelope(values, points_across(axes))
+    axes.plot(times[at], values[at], color=color, linewidth=width, label=label or None)
 
 
 def label_y(axes: Axes, text: str, mm: float = 9.0) -> None:

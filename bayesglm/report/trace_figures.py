@@ -23,12 +23,11 @@ from bayesglm.report.style import (
     PALE,
     VERMILLION,
     Margins,
-    envelope,
     hide_x,
     label_y,
     new_figure,
     panels,
-    points_across,
+    plot_thinned,
 )
 
 _MOST_SHOWN: Final = 8
@@ -182,9 +181,8 @@ def _label(stacks: Sequence[Stack], columns: int, y_labels: tuple[str, str]) -> 
 
 def _raw_sweep(stack: Stack, sweep: Sweep, step_ms: float) -> None:
     times = times_of(sweep.n_samples, step_ms)
-    columns = points_across(stack[0])
-    stack[0].plot(*envelope(times, sweep.voltage, columns), color=INK, linewidth=0.5)
-    stack[1].plot(*envelope(times, sweep.current * 1e3, columns), color=BLUE, linewidth=0.6)
+    plot_thinned(stack[0], times, sweep.voltage, INK, 0.5)
+    plot_thinned(stack[1], times, sweep.current * 1e3, BLUE, 0.6)
     if sweep.spikes is not None and len(sweep.spikes):
         _mark_spikes(stack[0], times[sweep.spikes])
     _dress(stack, (0.0, times[-1]), n_ticks=3)
@@ -201,15 +199,12 @@ def _mark_spikes(axes: Axes, times_ms: FloatArray) -> None:
 
 def _predicted_sweep(stack: Stack, one: SweepRows, longest_ms: float) -> None:
     here = _middle(one.time_ms, longest_ms)
-    times, kept, columns = one.time_ms[here], one.kept[here], points_across(stack[0])
+    times, kept = one.time_ms[here], one.kept[here]
     voltage = np.where(kept, one.voltage[here], np.nan)
     predicted = np.where(kept, one.prediction[here], np.nan)
-    for values, color, width, label in (
-        (voltage, LIGHT, 1.5, "recorded"),
-        (predicted, VERMILLION, 0.8, "predicted"),
-    ):
-        stack[0].plot(*envelope(times, values, columns), color=color, linewidth=width, label=label)
-    stack[1].plot(*envelope(times, one.residual[here], columns), color=BLUE, linewidth=0.5)
+    plot_thinned(stack[0], times, voltage, LIGHT, 1.5, "recorded")
+    plot_thinned(stack[0], times, predicted, VERMILLION, 0.8, "predicted")
+    plot_thinned(stack[1], times, one.residual[here], BLUE, 0.5)
     stack[1].axhline(0.0, color=INK, linewidth=0.5)
     for axes in stack:
         axes.broken_barh(

@@ -1,0 +1,77 @@
+"""The prior of the weights and the table that the report prints come from one place."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from bayesglm.inference.bands import kernel_rows
+from bayesglm.kernels.basis import KernelSpec
+from bayesglm.kernels.design import VoltageDesign
+from bayesglm.models.priors import kernel_scales, prior_table, weight_prior
+from bayesglm.recording.settings import PriorsSection
+
+DESIGN = VoltageDesign(KernelSpec(100.0, 10), KernelSpec(300.0, 12))
+
+
+def test_root_is_a_square_root_of_the_covariance_at_the_scales() -> None:
+    prior = weight_prior(DESIGN, PriorsSection())
+    covariance = prior.root @ prior.root.T
+    product = covariance @ prior.precision(prior.sd_scale)
+    np.testing.assert_allclose(product, np.eye(DESIGN.n_weights), atol=1e-6)
+
+
+def test_settings_are_the_sds_in_their_units() -> None:
+    settings = PriorsSection(offset_mean=-70, offset_sd=5, electrode_sd=11)
+    prior = weight_prior(DESIGN, settings)
+    sd = np.sqrt(np.diagonal(prior.root @ prior.root.T))
+    assert (prior.mean[0], np.count_nonzero(prior.mean)) == (-70, 1)
+    assert sd[:2] == pytest.approx([5, 11])
+
+
+@pytest.mark.parametrize(("kernel", "at_ms"), [("input", 5.0), ("after_spike", 10.0)])
+def test_kernels_drawn_from_the_prior_have_the_stated_size(kernel: str, at_ms: float) -> None:
+    """Bends of σ and a straight part of 2σ together make √5 σ, as geometric mean over the axis."""
+    settings = PriorsSection(input_sd=3.0, after_spike_sd=7.0)
+    prior = weight_prior(DESIGN, settings)
+    scale = kernel_scales(settings)[kernel]
+    spec = DESIGN.kernels[kernel]
+    x = (np.arange(500) + 0.5) / 500
+    lags = spec.warp_ms * np.expm1(x * np.log1p(spec.duration_ms / spec.warp_ms))
+    rows = kernel_rows(DESIGN, kernel, lags)
+    sd = np.sqrt(np.einsum("lp,pq,lq->l", rows, prior.root @ prior.root.T, rows))
+    assert np.exp(np.log(sd / scale).mean()) == pytest.approx(np.sqrt(5), rel=0.06)
+    near = rows[np.argmin(np.abs(lags - at_ms))]
+    draws = np.random.default_rng(0).normal(size=(4000, DESIGN.n_weights)) @ prior.root.T @ near
+    assert draws.std() == pytest.approx(sd[np.argmin(np.abs(lags - at_ms))], rel=0.05)
+
+
+def test_precision_falls_with_the_square_of_the_sds() -> None:
+    prior = weight_prior(DESIGN, PriorsSection())
+    sds = np.array([2.0, 5.0])
+    place = DESIGN.columns["after_spike"]
+    expected = prior.fixed[place, place] + prior.bend[1, place, place] / 25
+    np.testing.assert_allclose(prior.precision(sds)[place, place], expected)
+    assert not prior.precision(sds)[DESIGN.columns["input"], place].any()
+
+
+@pytest.mark.parametrize("electrode", [True, False])
+@pytest.mark.parametrize("after_spike", [KernelSpec(300.0, 12), None])
+def test_table_has_a_row_with_unit_and_reason_for_everything_fitted(
+    electrode: bool, after_spike: KernelSpec | None
+) -> None:
+    design = VoltageDesign(KernelSpec(100.0), after_spike, electrode)
+    rows = prior_table(design, PriorsSection(input_sd=17.5, after_spike_sd=8.25))
+    parameters = [row.parameter for row in rows]
+    assert ("electrode term" in parameters) == electrode
+    assert ("sd of η" in parameters) == (after_spike is not None)
+    assert {"offset E", "sd of κ", "bends of κ", "straight part of κ", "φ"} <= set(parameters)
+    assert all(row.prior and row.unit and row.reason for row in rows)
+    assert next(r for r in rows if r.parameter == "sd of κ").prior == "half-normal(17.5)"
+    assert next(r for r in rows if r.parameter == "straight part of κ").prior == "normal(0, 35)"
+
+
+def test_prior_without_spikes_has_no_after_spike_part() -> None:
+    prior = weight_prior(VoltageDesign(KernelSpec(100.0), None), PriorsSection())
+    assert prior.names == ("input",)
+    assert prior.bend.shape == (1, 16, 16)
