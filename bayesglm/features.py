@@ -151,14 +151,17 @@ def _after_spike(
     mean = curves.mean(axis=0)
     lowest = int(np.argmin(mean))
     highest = lowest + int(np.argmax(mean[lowest:]))
+    peaks = curves[:, highest]
+    peak_times = lags[lowest + np.argmax(curves[:, lowest:], axis=1)]
+    if highest == len(lags) - 1:
+        # The kernel only climbs back to its end, which is zero by construction: no peak.
+        peaks, peak_times = np.full_like(peaks, np.nan), np.full_like(peak_times, np.nan)
     kernel = "after_spike"
     found = {
         "after_spike_minimum": FeatureDraws(kernel, "mV", curves[:, lowest]),
         "after_spike_minimum_time": FeatureDraws(kernel, "ms", lags[np.argmin(curves, axis=1)]),
-        "after_spike_peak": FeatureDraws(kernel, "mV", curves[:, highest]),
-        "after_spike_peak_time": FeatureDraws(
-            kernel, "ms", lags[lowest + np.argmax(curves[:, lowest:], axis=1)]
-        ),
+        "after_spike_peak": FeatureDraws(kernel, "mV", peaks),
+        "after_spike_peak_time": FeatureDraws(kernel, "ms", peak_times),
         "after_spike_peak_probability": FeatureDraws(
             kernel, "1", has_bump(lags[lowest:], curves[:, lowest:]), is_probability=True
         ),

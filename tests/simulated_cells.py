@@ -6,6 +6,7 @@ Nothing here is data: the neurons are those of `bayesglm.checks.simulation`.
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -25,14 +26,15 @@ QUIET = Noise((0.7,), (15.0,))
 
 
 def after_spike_kernel(shape: str, step_ms: float = STEP_MS) -> FloatArray:
-    """η of 300 ms: a monotone undershoot, or an undershoot followed by a bump of 2 mV."""
+    """η of 300 ms: a monotone undershoot, or an undershoot followed by a bump of about 1 mV."""
     lags = step_ms * np.arange(1, round(300 / step_ms) + 1)
     fade = 1 - lags / 300
     undershoot: FloatArray = -6.0 * np.exp(-lags / 50) * fade
     if shape == "monotone":
         return undershoot
     assert shape == "bump"
-    bump: FloatArray = -9.0 * np.exp(-lags / 15) * fade + 2.0 * np.exp(-((lags - 90) ** 2) / 1800)
+    # Its area is negative, so that the cell does not excite itself.
+    bump: FloatArray = -12.0 * np.exp(-lags / 15) * fade + np.exp(-((lags - 90) ** 2) / 800)
     return bump
 
 
@@ -93,6 +95,14 @@ def recording_of_noise(
     return simulate(
         cell, coloured_current(rng, n_sweeps, seconds, mean_nA, sd_nA), STEP_MS, rng, "simulated"
     )
+
+
+def interleaved(first: Recording, second: Recording) -> Recording:
+    """The sweeps of two recordings in turn, as one recording."""
+    pairs = zip(first.sweeps, second.sweeps, strict=True)
+    sweeps = [replace(one, number=0) for pair in pairs for one in pair]
+    numbered = tuple(replace(sweep, number=k) for k, sweep in enumerate(sweeps))
+    return replace(first, name="interleaved", sweeps=numbered)
 
 
 def arbitrary_recording(

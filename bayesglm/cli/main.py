@@ -55,6 +55,3 @@ def run() -> None:
     except InputError as error:
         print(f"bayesglm: {error}", file=sys.stderr)
         raise SystemExit(2) from None
-    except KeyboardInterrupt:
-        print("bayesglm: stopped; what was finished is kept", file=sys.stderr)
-        raise SystemExit(130) from None

@@ -35,18 +35,20 @@ def print_reasons(title: str, reasons: Sequence[Reason]) -> None:
     for row in reasons:
         table.add_row(row.check.replace("_", " "), escape(row.value), _severity(row.verdict))
     console.print(table)
-    print_advice(console, [row for row in reasons if row.verdict != "passed"])
+    print_advice(console, reasons)
     console.print()
 
 
 def print_advice(console: Console, reasons: Sequence[Reason]) -> None:
     """Print what each row means, and below those that share it the next command to try."""
-    for command in dict.fromkeys(row.command for row in reasons):
+    told = [row for row in reasons if row.advice]
+    for command in dict.fromkeys(row.command for row in told):
         console.print()
-        for row in reasons:
-            if row.command == command:
-                name = row.check.replace("_", " ")
-                console.print(Text.assemble(_severity(row.verdict), f" {name}: {row.advice}"))
+        shown = [(row.verdict, row.check, row.advice) for row in told if row.command == command]
+        for verdict, check, advice in dict.fromkeys(shown):
+            # Advice on a row that passed is a note.
+            word = Text("note") if verdict == "passed" else _severity(verdict)
+            console.print(Text.assemble(word, f" {check.replace('_', ' ')}: {advice}"))
         if command:
             # Not wrapped: a command must be copied as one line.
             console.print(Text(f"    {command}"), soft_wrap=True)

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import shlex
 from collections.abc import Sequence
 
 import numpy as np
@@ -15,10 +14,11 @@ from bayesglm.inference.results import Split, Verdict
 from bayesglm.likelihood.calibration import Calibration, correlation_time_ms
 from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.recording.linearity import linear_range
+from bayesglm.recording.ranges import format_sweeps
 from bayesglm.recording.recording import Recording
-from bayesglm.recording.settings import Settings
+from bayesglm.recording.settings import SamplingSection, Settings
 from bayesglm.recording.steps import measure_steps
-from bayesglm.recording.wording import fit_command, fixed
+from bayesglm.recording.wording import check_command, fit_command, fixed
 from bayesglm.verdict import Reason, worst
 
 
@@ -37,7 +37,7 @@ def judge(
     Verdict
         Without the seconds, which are not over yet.
     """
-    commands = _commands(recordings, settings)
+    commands = _commands(recordings, digest, summary, settings)
     sampler = diagnose.summarise_sampler(posterior.chains, posterior.weights)
     correlation_ms = correlation_time_ms(digest, calibration.fit)
     bent = linearity(recordings, posterior.design, posterior.flat.mean(axis=0), correlation_ms)
@@ -75,19 +75,23 @@ def judge(
 def _drive_reason(split: Split, commands: diagnose.Commands) -> Reason:
     if not split.ranges:
         return diagnose.drive_reason(split.kernel, None, "", commands)
-    shown = "input_resistance" if split.kernel == "input" else _shown_after_spike(split)
-    unit = "MΩ" if split.kernel == "input" else "mV"
-    digits = 0 if split.kernel == "input" else 1
+    feature, words, unit, digits = _shown(split)
     told = ", ".join(
-        f"{fixed(one.features[shown][0], digits)} {unit} at {one.label}" for one in split.ranges
+        f"{fixed(one.features[feature][0], digits)} {unit} at {one.label}" for one in split.ranges
     )
-    named = shown.replace("_", " ")
-    return diagnose.drive_reason(split.kernel, split.disagreement, f"{named} {told}", commands)
+    return diagnose.drive_reason(split.kernel, split.disagreement, f"{words} {told}", commands)
 
 
-def _shown_after_spike(split: Split) -> str:
-    names = [name for name in split.ranges[0].features if name.startswith("after_spike_at_")]
-    return names[0] if names else "after_spike_minimum"
+def _shown(split: Split) -> tuple[str, str, str, int]:
+    """The feature that tells a kernel's ranges apart: name, words, unit, decimals."""
+    if split.kernel == "input":
+        return "input_resistance", "input resistance", "MΩ", 0
+    prefix = "after_spike_at_"
+    for name in split.ranges[0].features:
+        if name.startswith(prefix):
+            lag = name.removeprefix(prefix).removesuffix("ms")
+            return name, f"η({lag} ms)", "mV", 1
+    return "after_spike_minimum", "minimum of η", "mV", 1
 
 
 def _white_reason(commands: diagnose.Commands) -> Reason:
@@ -97,20 +101,47 @@ def _white_reason(commands: diagnose.Commands) -> Reason:
         "calibrated",
         "caution",
         "residuals of cells are correlated: these intervals are several times too narrow",
-        commands.narrower.split(" --set")[0],
+        commands.calibrated,
     )
 
 
-def _commands(recordings: Sequence[Recording], settings: Settings) -> diagnose.Commands:
-    files = " ".join(shlex.quote(recording.source) for recording in recordings)
-    first = recordings[0]
-    found = linear_range(measure_steps(first)) if len(recordings) == 1 else None
-    narrower = f"bayesglm check {files}"
-    if found is not None and not found.complete:
-        narrower = fit_command(first, found.selection)
-    longer = f"--set sampling.draws={4 * settings.sampling.draws}"
+def _commands(
+    recordings: Sequence[Recording], digest: VoltageDigest, summary: Summary, settings: Settings
+) -> diagnose.Commands:
+    check = check_command(recordings)
+    longer = SamplingSection(draws=4 * settings.sampling.draws, seed=settings.sampling.seed)
+    calibrated = settings.model.model_copy(update={"noise": "calibrated"})
     return diagnose.Commands(
-        check=f"bayesglm check {files}",
-        narrower=narrower,
-        more_draws=f"bayesglm fit {files} {longer} --out {shlex.quote(first.name)}_longer",
+        check=check,
+        narrower=_narrower(recordings, settings) or check,
+        one_drive=_one_drive(recordings, digest, summary, settings) or check,
+        calibrated=fit_command(
+            recordings, "", settings.model_copy(update={"model": calibrated}), "calibrated"
+        ),
+        more_draws=fit_command(
+            recordings, "", settings.model_copy(update={"sampling": longer}), "longer"
+        ),
     )
+
+
+def _narrower(recordings: Sequence[Recording], settings: Settings) -> str:
+    """The fit of the widest linear range of current; empty where steps do not tell it."""
+    if len(recordings) > 1:
+        return ""
+    found = linear_range(measure_steps(recordings[0]))
+    if found is None or found.complete:
+        return ""
+    return fit_command(recordings, found.selection, settings)
+
+
+def _one_drive(
+    recordings: Sequence[Recording], digest: VoltageDigest, summary: Summary, settings: Settings
+) -> str:
+    """The fit of the strongest range of drive of η; empty where sweeps do not tell it apart."""
+    split = summary.splits.get("after_spike")
+    if split is None or not split.ranges or len(recordings) > 1:
+        return ""
+    if digest.n_units != len(recordings[0].sweeps):
+        return ""
+    numbers = [recordings[0].sweeps[digest.sweep[unit]].number for unit in split.ranges[-1].units]
+    return fit_command(recordings, f"sweeps={format_sweeps(numbers)}", settings)

@@ -180,7 +180,7 @@ def _feature(
         sd = lower = upper = nan
     ranges = splits[drawn.kernel].ranges if drawn.kernel else ()
     low, high, between = nan, nan, nan
-    if ranges:
+    if ranges and np.isfinite(mean):
         means = np.array([r.features[name][0] for r in ranges])
         sds = np.array([r.features[name][1] for r in ranges])
         between = float(between_sd(means, sds))

@@ -33,11 +33,31 @@ KERNEL_SIGNS = {"input": "input kernel Îº", "after_spike": "after-spike kernel Î
 
 @dataclass(frozen=True)
 class Commands:
-    """Commands to copy into an advice."""
+    """Commands to copy into an advice.
+
+    Attributes
+    ----------
+    check
+        Look at the recordings again.
+    narrower
+        Fit a range over which the membrane is linear.
+    one_drive
+        Fit the sweeps of one range of drive, with their spikes.
+    calibrated
+        Fit with the calibrated likelihood.
+    more_draws
+        Sample longer.
+    """
 
     check: str
     narrower: str
+    one_drive: str
+    calibrated: str
     more_draws: str
+
+    def other_range(self, kernel: str) -> str:
+        """Fit a range over which a kernel is more nearly one kernel."""
+        return self.narrower if kernel == "input" else self.one_drive
 
 
 @dataclass(frozen=True)
@@ -90,20 +110,21 @@ def summarise_sampler(chains: Chains, weights: FloatArray) -> SamplerSummary:
 def sampler_reasons(summary: SamplerSummary, commands: Commands) -> list[Reason]:
     """Rows on the sampler."""
     advice = "the chains have not settled; run them longer"
+    # Asked so that NaN, as of a chain that never moved, is on the bad side of every limit.
     return [
         Reason(
             "rhat",
             f"{summary.rhat_max:.3f}",
             f"< {_RHAT_LIMIT}",
-            _grade(summary.rhat_max < _RHAT_LIMIT, summary.rhat_max >= _RHAT_FAILED),
-            *_when(summary.rhat_max >= _RHAT_LIMIT, advice, commands.more_draws),
+            _grade(summary.rhat_max < _RHAT_LIMIT, not summary.rhat_max < _RHAT_FAILED),
+            *_when(not summary.rhat_max < _RHAT_LIMIT, advice, commands.more_draws),
         ),
         Reason(
             "effective_draws",
             f"{summary.ess_min:.0f}",
             f"> {_ESS_LIMIT:.0f}",
-            _grade(summary.ess_min > _ESS_LIMIT, summary.ess_min < _ESS_FAILED),
-            *_when(summary.ess_min <= _ESS_LIMIT, advice, commands.more_draws),
+            _grade(summary.ess_min > _ESS_LIMIT, not summary.ess_min >= _ESS_FAILED),
+            *_when(not summary.ess_min > _ESS_LIMIT, advice, commands.more_draws),
         ),
         Reason(
             "divergences",
@@ -121,7 +142,7 @@ def sampler_reasons(summary: SamplerSummary, commands: Commands) -> list[Reason]
             f"{summary.bfmi_min:.2f}",
             f"> {_BFMI_LIMIT}",
             _grade(summary.bfmi_min > _BFMI_LIMIT),
-            *_when(summary.bfmi_min <= _BFMI_LIMIT, advice, commands.more_draws),
+            *_when(not summary.bfmi_min > _BFMI_LIMIT, advice, commands.more_draws),
         ),
     ]
 
@@ -169,7 +190,7 @@ def ratio_reasons(ratio: dict[str, float], commands: Commands) -> list[Reason]:
                 value > _RATIO_LIMIT,
                 f"units differ in the {KERNEL_SIGNS[kernel]} by more than correlated noise "
                 "explains; the band is widened accordingly",
-                commands.narrower,
+                commands.other_range(kernel),
             ),
         )
         for kernel, value in ratio.items()
@@ -229,7 +250,7 @@ def drive_reason(kernel: str, disagreement: float | None, told: str, commands: C
             apart,
             f"the {sign} depends on the drive: it belongs to this protocol, and the protocol "
             "columns say how far",
-            commands.narrower,
+            commands.other_range(kernel),
         ),
     )
 

@@ -24,6 +24,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.stats import norm
+from scipy.stats import t as student_t
 
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.digest import VoltageDigest
@@ -247,8 +249,8 @@ def calibrate(
     between = _between_sweeps(digest, fit)
     n_units, rank = digest.n_units, fit.rank
     jackknife = (n_units - 1) / n_units * changes.T @ changes + between[1]
-    spectral, spectrum = _spectral_covariance(digest, fit)
-    spectral = np.asarray(spectral + between[0])
+    within, spectrum = _spectral_covariance(digest, fit)
+    spectral: FloatArray = within + between[0]
     ratio = inflation or _kernel_ratio(digest.design, fit, jackknife, spectral)
     if inflation is None:
         inflation = {name: max(1.0, value) for name, value in ratio.items()}
@@ -303,11 +305,14 @@ def _between_sweeps(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArra
     """What the spread of sweep offsets adds to the covariance: of all sweeps, of cut ones.
 
     A jackknife over whole sweeps sees their offsets vary; one over blocks of a sweep does not.
+    The variance of S offsets is known with S − 1 degrees of freedom: it is raised so that a 90 %
+    interval of the normal is as wide as that of Student's t.
     """
     sums = sweep_sums(digest.gram, digest.sweep)
     weight = 1.0 / (1.0 + fit.offset_ratio * sums[:, 0, 0])
     pull = weight[:, None] * sums[:, 0, :-1] @ fit.basis
-    variance = fit.offset_variance
+    freedom = float(max(int(np.count_nonzero(sums[:, 0, 0])) - 1, 1))
+    variance = fit.offset_variance * (student_t.ppf(0.95, freedom) / norm.ppf(0.95)) ** 2
     cut = np.bincount(digest.sweep, minlength=len(sums)) > 1
     return variance * pull.T @ pull, variance * pull[cut].T @ pull[cut]
 

@@ -72,16 +72,16 @@ def check_recording(recording: Recording, settings: Settings) -> tuple[Reason, .
     return (
         _step(recording),
         _jitter(recording),
-        _missing(recording),
-        _time_jumps(recording),
+        _missing(recording, settings),
+        _time_jumps(recording, settings),
         _current(recording),
-        _clipping(recording),
+        _clipping(recording, settings),
         _spikes(recording),
         _baseline(measures, settings),
-        _drift(recording, measures),
+        _drift(recording, measures, settings),
         *_input_resistance(measures, level),
-        _series_jump(recording, measures, level),
-        _linearity(recording, measures),
+        _series_jump(recording, measures, settings),
+        _linearity(recording, measures, settings),
     )
 
 
@@ -115,7 +115,7 @@ def _jitter(recording: Recording) -> Reason:
     )
 
 
-def _missing(recording: Recording) -> Reason:
+def _missing(recording: Recording, settings: Settings) -> Reason:
     """Name the runs of missing values, in the current or in voltage that would be used."""
     runs = [
         (sweep, start, stop)
@@ -134,11 +134,11 @@ def _missing(recording: Recording) -> Reason:
         "none",
         "failed",
         "leave these sweeps out, or cut the recording there",
-        _sound_sweeps(recording),
+        _sound_sweeps(recording, settings),
     )
 
 
-def _time_jumps(recording: Recording) -> Reason:
+def _time_jumps(recording: Recording, settings: Settings) -> Reason:
     jumps = [(sweep, jump) for sweep in recording.sweeps for jump in sweep.jumps]
     if not jumps:
         return Reason("time_jumps", "no jumps in time", "none")
@@ -151,7 +151,7 @@ def _time_jumps(recording: Recording) -> Reason:
         "none",
         "failed",
         "leave these sweeps out, or give each stretch between jumps a sweep number of its own",
-        _sound_sweeps(recording),
+        _sound_sweeps(recording, settings),
     )
 
 
@@ -179,7 +179,7 @@ def _constant_current(value: str, recording: Recording) -> Reason:
     )
 
 
-def _clipping(recording: Recording) -> Reason:
+def _clipping(recording: Recording, settings: Settings) -> Reason:
     """Look for plateaus at the highest or lowest voltage of the recording."""
     limit = f"fewer than {_CLIPPED_IN_A_ROW} equal samples in a row at an extreme"
     finite = [one.voltage[np.isfinite(one.voltage)] for one in recording.sweeps]
@@ -203,7 +203,7 @@ def _clipping(recording: Recording) -> Reason:
         limit,
         "caution",
         "the amplifier or converter seems to be at the end of its range there: leave the sweep out",
-        _without(recording, {sweep.number}),
+        _without(recording, {sweep.number}, settings),
     )
 
 
@@ -244,7 +244,7 @@ def _baseline(measures: StepMeasures, settings: Settings) -> Reason:
     )
 
 
-def _drift(recording: Recording, measures: StepMeasures) -> Reason:
+def _drift(recording: Recording, measures: StepMeasures, settings: Settings) -> Reason:
     """Compare the first and the last sweep on a straight line through all baselines."""
     limit = f"at most {_LARGEST_DRIFT_MV:g} mV"
     sweeps = np.flatnonzero(np.isfinite(measures.baselines_mV))
@@ -264,7 +264,7 @@ def _drift(recording: Recording, measures: StepMeasures) -> Reason:
         if fits
         else "offsets of the sweeps absorb it, but the cell may have changed: "
         "compare fits of the first and the last sweeps",
-        "" if fits else fit_command(recording, first_half),
+        "" if fits else fit_command(recording, first_half, settings),
     )
 
 
@@ -289,11 +289,12 @@ def _resistance_row(one: LevelMeasure, level: float) -> Reason:
     )
 
 
-def _series_jump(recording: Recording, measures: StepMeasures, level: float) -> Reason:
+def _series_jump(recording: Recording, measures: StepMeasures, settings: Settings) -> Reason:
     limit = (
         f"at most {_LARGEST_SERIES_MOHM:g} MΩ and "
-        f"{_LARGEST_SERIES_SHARE:.0%} of the input resistance"
+        f"{100 * _LARGEST_SERIES_SHARE:.0f} % of the input resistance"
     )
+    level = settings.sampling.level
     found = mean_interval(measures.series_MOhm, level)
     if not found.n:
         why = _NO_STEPS if not measures.steps else "not measured: sampled too coarsely, or spikes"
@@ -302,7 +303,7 @@ def _series_jump(recording: Recording, measures: StepMeasures, level: float) -> 
     resistance = float(np.median(quiet)) if quiet else np.nan
     share = abs(found.mean) / resistance
     beyond = abs(found.mean) > _LARGEST_SERIES_MOHM or share > _LARGEST_SERIES_SHARE
-    of_input = f", {share:.0%} of the input resistance" if np.isfinite(share) else ""
+    of_input = f", {100 * share:.0f} % of the input resistance" if np.isfinite(share) else ""
     return Reason(
         "series_jump",
         f"{_with_interval(found, level, 1)} over {found.n} sweeps{of_input}",
@@ -312,12 +313,12 @@ def _series_jump(recording: Recording, measures: StepMeasures, level: float) -> 
         "resistances by level hold it"
         if beyond
         else "",
-        fit_command(recording, "") if beyond else "",
+        fit_command(recording, "", settings) if beyond else "",
     )
 
 
-def _linearity(recording: Recording, measures: StepMeasures) -> Reason:
-    limit = f"every level within {LARGEST_SHARE:.0%} of a line, or within chance"
+def _linearity(recording: Recording, measures: StepMeasures, settings: Settings) -> Reason:
+    limit = f"every level within {100 * LARGEST_SHARE:.0f} % of a line, or within chance"
     if not measures.levels:
         return Reason("linearity", _NO_STEPS, limit)
     if len(measures.levels) == 1:
@@ -330,7 +331,7 @@ def _linearity(recording: Recording, measures: StepMeasures) -> Reason:
             limit,
             "caution",
             "the kernels describe this protocol, not the cell: give smaller steps",
-            fit_command(recording, ""),
+            fit_command(recording, "", settings),
         )
     lower, upper = found.whole_pA
     value = (
@@ -348,7 +349,7 @@ def _linearity(recording: Recording, measures: StepMeasures) -> Reason:
         "beyond this range the cell spikes or bends, and a linear kernel averages over what it "
         f"does there; inside, departures below {found.chance_mV:.1f} mV would not be seen at a "
         "level given once",
-        fit_command(recording, found.selection),
+        fit_command(recording, found.selection, settings),
     )
 
 
@@ -363,18 +364,18 @@ def _absent(sweep: Sweep) -> BoolArray:
     return np.isnan(sweep.current) | (np.isnan(sweep.voltage) & sweep.keep)
 
 
-def _sound_sweeps(recording: Recording) -> str:
+def _sound_sweeps(recording: Recording, settings: Settings) -> str:
     """Return the command that fits the sweeps without jumps or missing values."""
     faulty = {one.number for one in recording.sweeps if one.jumps or _absent(one).any()}
-    return _without(recording, faulty)
+    return _without(recording, faulty, settings)
 
 
-def _without(recording: Recording, numbers: set[int]) -> str:
+def _without(recording: Recording, numbers: set[int], settings: Settings) -> str:
     """Return the command that fits all other sweeps; a check where none is left."""
     left = [sweep.number for sweep in recording.sweeps if sweep.number not in numbers]
     if not left:
         return check_command(recording)
-    return fit_command(recording, f"sweeps={format_sweeps(left)}")
+    return fit_command(recording, f"sweeps={format_sweeps(left)}", settings)
 
 
 def _with_interval(found: MeanInterval, level: float, digits: int) -> str:
@@ -382,4 +383,4 @@ def _with_interval(found: MeanInterval, level: float, digits: int) -> str:
     if found.n < 2:
         return mean
     bounds = f"{fixed(found.lower, digits)} to {fixed(found.upper, digits)}"
-    return f"{mean} ({level:.0%} interval {bounds}, sd {fixed(found.sd, digits)})"
+    return f"{mean} ({100 * level:g} % interval {bounds}, sd {fixed(found.sd, digits)})"

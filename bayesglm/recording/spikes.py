@@ -9,6 +9,7 @@ from scipy.signal import find_peaks
 
 from bayesglm.recording.recording import FloatArray, IntArray, Recording
 from bayesglm.recording.settings import RecordingSection
+from bayesglm.recording.wording import minus
 
 #: The rise is looked for in this time before the peak, ms.
 RISE_MS = 5.0
@@ -94,12 +95,12 @@ def find_spikes(voltage: FloatArray, step_ms: float, settings: RecordingSection)
 def describe(settings: RecordingSection) -> str:
     """Return in words how spikes are found and when they are said to happen."""
     moment = (
-        f"the first sample at or above {settings.spike_height_mV:g} mV on the rise"
+        f"the first sample at or above {minus(f'{settings.spike_height_mV:g}')} mV on the rise"
         if settings.spike_moment == "crossing"
         else "the sample of the peak"
     )
     return (
-        f"peaks of at least {settings.spike_height_mV:g} mV with a rise of at least "
+        f"peaks of at least {minus(f'{settings.spike_height_mV:g}')} mV with a rise of at least "
         f"{settings.spike_slope_mV_per_ms:g} mV/ms in the {RISE_MS:g} ms before, at least "
         f"{settings.spike_dead_time_ms:g} ms apart; a spike's time is {moment}"
     )

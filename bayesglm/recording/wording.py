@@ -2,21 +2,82 @@
 
 from __future__ import annotations
 
+import json
 import shlex
+from collections.abc import Sequence
+from typing import Any
 
 from bayesglm.recording.recording import Recording
+from bayesglm.recording.settings import Settings
 
 
-def fit_command(recording: Recording, selection: str) -> str:
-    """Return the command that fits what `selection` leaves of the recording."""
-    select = f" --select '{selection}'" if selection else ""
-    out = f"{recording.name}_selected" if selection else f"{recording.name}_fit"
-    return f"bayesglm fit {shlex.quote(recording.source)}{select} --out {shlex.quote(out)}"
+def fit_command(
+    recordings: Recording | Sequence[Recording],
+    selection: str,
+    settings: Settings,
+    suffix: str = "selected",
+) -> str:
+    """Return the command that fits what `selection` leaves of a cell, settings kept.
+
+    Parameters
+    ----------
+    recordings
+        The cell's recordings; several are pooled.
+    selection
+        An expression for ``--select``; empty for none.
+    settings
+        Settings in force; those that differ from the defaults are repeated.
+    suffix
+        What the results' folder is named after, beside the recording.
+    """
+    several = (recordings,) if isinstance(recordings, Recording) else tuple(recordings)
+    name = several[0].name
+    words = ["bayesglm", "fit", *(one.source for one in several)]
+    if len(several) > 1:
+        words += ["--cell", name]
+    words += _stated(settings)
+    if selection:
+        words += ["--select", selection]
+    return _quoted([*words, "--out", f"{name}_{suffix}"])
 
 
-def check_command(recording: Recording) -> str:
-    """Return the command that checks the recording again."""
-    return f"bayesglm check {shlex.quote(recording.source)}"
+def check_command(recordings: Recording | Sequence[Recording]) -> str:
+    """Return the command that checks the recordings again."""
+    several = (recordings,) if isinstance(recordings, Recording) else tuple(recordings)
+    return _quoted(["bayesglm", "check", *(one.source for one in several)])
+
+
+def _stated(settings: Settings) -> list[str]:
+    """The settings that differ from the defaults, as options of the command line."""
+    defaults = _flat(Settings().model_dump(mode="json"))
+    words = []
+    for key, value in _flat(settings.model_dump(mode="json")).items():
+        if value == defaults[key] or key.startswith("study."):
+            continue
+        selected = key.removeprefix("recording.select.")
+        if selected != key:
+            words += ["--select", f"{selected}={value}"]
+        else:
+            words += ["--set", f"{key}={json.dumps(value, ensure_ascii=False)}"]
+    return words
+
+
+def _flat(sections: dict[str, Any], prefix: str = "") -> dict[str, Any]:
+    flat: dict[str, Any] = {}
+    for name, value in sections.items():
+        if isinstance(value, dict):
+            flat |= _flat(value, f"{prefix}{name}.")
+        else:
+            flat[prefix + name] = value
+    return flat
+
+
+def _quoted(words: Sequence[str]) -> str:
+    # Single quotes around what holds a bracket or =range, as a person would type it.
+    return " ".join(
+        f"'{word}'" if word.partition("=")[2] and "'" not in word else shlex.quote(word)
+        for word in words
+    )
 
 
 def minus(text: str) -> str:

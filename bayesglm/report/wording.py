@@ -231,7 +231,9 @@ def _by_range(feature: Feature, splits: dict[str, Split], places: int) -> str:
     # Those in between are told only where they are not in between.
     if all(min(means[0], means[-1]) <= mean <= max(means[0], means[-1]) for mean in means):
         ranges = [ranges[0], ranges[-1]]
-    return ", ".join(
+    # The sentence may speak of a size ("pulled down by"); a range's value has its sign.
+    what = "η " if kernel == "after_spike" else ""
+    return what + ", ".join(
         f"{with_unit(one.features[feature.name][0], places, feature.unit)} at {minus(one.label)}"
         for one in ranges
     )

@@ -112,9 +112,7 @@ def regression(
     rng: np.random.Generator, n: int, phi: float, n_units: int, n_columns: int = 5
 ) -> tuple[VoltageDigest, np.ndarray]:
     """Rows of correlated columns with correlated noise, and the true weights."""
-    x = np.column_stack(
-        [np.ones(n), *(correlated(rng, n, 0.9) for _ in range(n_columns + 1))]
-    )
+    x = np.column_stack([np.ones(n), *(correlated(rng, n, 0.9) for _ in range(n_columns + 1))])
     truth = np.concatenate([[-65.0], np.linspace(-1, 1, n_columns + 1)])
     return matrix_digest(x, x @ truth + correlated(rng, n, phi), n_units), truth
 
@@ -153,7 +151,9 @@ def test_covariance_is_the_jackknife_shrunk_towards_the_inflated_spectral_one() 
     digest, calibration = plain_calibration()
     fit = calibration.fit
     assert digest.design.columns["input"] == slice(2, 7)
-    jackknife, spectral = (in_weights(fit, c) for c in (calibration.jackknife, calibration.spectral))
+    jackknife, spectral = (
+        in_weights(fit, c) for c in (calibration.jackknife, calibration.spectral)
+    )
     inner = slice(2, 7)
     d2 = np.trace(np.linalg.solve(spectral[inner, inner], jackknife[inner, inner])) / 5
     assert calibration.ratio["input"] == pytest.approx(np.sqrt(d2))

@@ -39,7 +39,9 @@ class Made:
         root = rng.normal(size=(rank, rank))
         self.covariance = root @ root.T + 0.5 * np.eye(rank)
         truth = self.prior.mean + self.prior.root @ rng.normal(size=P) * 0.3
-        self.found = self.known @ truth + np.linalg.cholesky(self.covariance) @ rng.normal(size=rank)
+        self.found = self.known @ truth + np.linalg.cholesky(self.covariance) @ rng.normal(
+            size=rank
+        )
         precision = self.known.T @ np.linalg.solve(self.covariance, self.known)
         estimate = np.linalg.pinv(self.known) @ self.found
         self.evidence: VoltageEvidence = voltage_evidence(
@@ -66,7 +68,9 @@ class Made:
 def test_marginal_density_is_the_normal_one(rank: int) -> None:
     """Source: scipy.stats.multivariate_normal; differences, since a constant is left out."""
     made = Made(rank)
-    found = [float(log_marginal(made.evidence, jnp.array(sd), jnp.array(phi))) for sd, phi in POINTS]
+    found = [
+        float(log_marginal(made.evidence, jnp.array(sd), jnp.array(phi))) for sd, phi in POINTS
+    ]
     expected = [made.log_density(sd, phi) for sd, phi in POINTS]
     np.testing.assert_allclose(np.diff(found), np.diff(expected), rtol=1e-7, atol=1e-7)
 
@@ -104,7 +108,9 @@ def test_model_adds_the_priors_of_sd_and_phi() -> None:
     for sd, phi in POINTS:
         values = {"sd": jnp.array(sd), "phi": jnp.array(phi)}
         found.append(float(log_density(voltage_model, (made.evidence,), {}, values)[0]))
-        prior = halfnorm.logpdf(sd, scale=[20.0, 10.0]).sum() + gamma.logpdf(phi, 2.5, scale=1 / 2.5)
+        prior = halfnorm.logpdf(sd, scale=[20.0, 10.0]).sum() + gamma.logpdf(
+            phi, 2.5, scale=1 / 2.5
+        )
         expected.append(made.log_density(sd, phi) + prior)
     np.testing.assert_allclose(np.diff(found), np.diff(expected), rtol=1e-7, atol=1e-7)
 
@@ -121,7 +127,9 @@ def test_conditional_weights_are_the_dense_posterior(rank: int) -> None:
         found = made.prior.mean + made.prior.root @ means[i]
         np.testing.assert_allclose((found - mean) / size, 0.0, atol=1e-6)
         root = made.prior.root @ np.linalg.inv(factors[i]).T
-        np.testing.assert_allclose((root @ root.T - covariance) / np.outer(size, size), 0, atol=1e-6)
+        np.testing.assert_allclose(
+            (root @ root.T - covariance) / np.outer(size, size), 0, atol=1e-6
+        )
         assert np.allclose(np.triu(factors[i], 1), 0.0)
 
 

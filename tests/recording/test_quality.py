@@ -182,12 +182,12 @@ def test_drift_beyond_its_limit_is_a_caution(drift_mV: float, verdict: str) -> N
 def test_an_unbalanced_bridge_is_a_caution(series_MOhm: float, verdict: str) -> None:
     row = _rows(rc_recording([-100, -50], series_MOhm=series_MOhm))["series_jump"]
     assert row.verdict == verdict
-    assert row.value.startswith(f"{series_MOhm:.1f} MΩ (90% interval")
+    assert row.value.startswith(f"{series_MOhm:.1f} MΩ (90 % interval")
 
 
 def test_the_interval_has_the_level_of_the_settings(recording: Recording) -> None:
     settings = Settings.model_validate({"sampling": {"level": 0.8}})
-    assert "(80% interval" in _rows(recording, settings)["series_jump"].value
+    assert "(80 % interval" in _rows(recording, settings)["series_jump"].value
 
 
 def test_fluctuating_current_says_that_it_has_no_steps() -> None:

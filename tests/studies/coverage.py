@@ -191,14 +191,14 @@ def judge(one: CellFit, neuron: Neuron, scenario: Scenario) -> Outcome:
     )
 
 
-def run(
-    name: str, recordings: int, seconds: float, seed: int
-) -> Iterator[Outcome]:
+def run(name: str, recordings: int, seconds: float, seed: int) -> Iterator[Outcome]:
     """Simulate and fit the recordings of a scenario."""
     scenario = SCENARIOS[name]
     neuron = make_neuron(scenario)
     for stream in np.random.default_rng([seed, *name.encode()]).spawn(recordings):
-        yield judge(fit(make_recording(scenario, neuron, seconds, stream), SETTINGS), neuron, scenario)
+        yield judge(
+            fit(make_recording(scenario, neuron, seconds, stream), SETTINGS), neuron, scenario
+        )
 
 
 ROWS = {
@@ -251,8 +251,10 @@ def main() -> None:
         f"{datetime.date.today().isoformat()}; "
         "made by `tests/studies/coverage.py`. In brackets the 95 % Monte Carlo interval.\n"
     )
-    print("| scenario | truth | noise sd (time constant) | sweep sd | current mean, sd | "
-          "spikes a recording | units |")
+    print(
+        "| scenario | truth | noise sd (time constant) | sweep sd | current mean, sd | "
+        "spikes a recording | units |"
+    )
     print("|---|---|---|---|---|---|---|")
     for name, outcomes in found.items():
         s = SCENARIOS[name]
@@ -267,7 +269,10 @@ def main() -> None:
     print("\n| covered | " + " | ".join(found) + " |")
     print("|---|" + "---|" * len(found))
     for words, attribute in ROWS.items():
-        cells = [with_error([float(getattr(o, attribute)) for o in outcomes]) for outcomes in found.values()]
+        cells = [
+            with_error([float(getattr(o, attribute)) for o in outcomes])
+            for outcomes in found.values()
+        ]
         print(f"| {words} | " + " | ".join(cells) + " |")
     passed = [f"{sum(o.verdict == 'passed' for o in outcomes)}" for outcomes in found.values()]
     print("| verdicts `passed`, of " + f"{arguments.recordings} | " + " | ".join(passed) + " |")
