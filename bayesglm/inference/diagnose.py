@@ -274,7 +274,9 @@ def linearity_reason(share: float, commands: Commands) -> Reason:
 def prior_reasons(shares: dict[str, FloatArray], commands: Commands) -> list[Reason]:
     """Rows on how much of each kernel the data set."""
     reasons = []
-    for kernel, share in shares.items():
+    for kernel, by_lag in shares.items():
+        # Where the prior pins a kernel to zero, as at its end, there is no share.
+        share = by_lag[np.isfinite(by_lag)]
         set_by_prior = float(np.mean(share > _PRIOR_SHARE_LIMIT)) if len(share) else 1.0
         severity: Severity = "passed"
         if set_by_prior > 0.5:

@@ -255,7 +255,7 @@ def calibrate(
     if inflation is None:
         inflation = {name: max(1.0, value) for name, value in ratio.items()}
         target = _inflated(digest.design, fit, spectral, inflation)
-        covariance = (n_units * jackknife + rank * target) / (n_units + rank)
+        covariance: FloatArray = (n_units * jackknife + rank * target) / (n_units + rank)
     else:
         covariance = _inflated(digest.design, fit, spectral, inflation)
     return Calibration(
@@ -314,7 +314,8 @@ def _between_sweeps(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArra
     freedom = float(max(int(np.count_nonzero(sums[:, 0, 0])) - 1, 1))
     variance = fit.offset_variance * (student_t.ppf(0.95, freedom) / norm.ppf(0.95)) ** 2
     cut = np.bincount(digest.sweep, minlength=len(sums)) > 1
-    return variance * pull.T @ pull, variance * pull[cut].T @ pull[cut]
+    of_all: FloatArray = variance * pull.T @ pull
+    return of_all, variance * pull[cut].T @ pull[cut]
 
 
 def inflation_within(

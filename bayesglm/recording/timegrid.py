@@ -90,7 +90,7 @@ def estimate_step(times: FloatArray, resolution: float) -> StepEstimate:
         return StepEstimate(step, 1, resolution)
     differences = np.diff(stretch)
     # Equal differences are printed exactly; otherwise both ends are off by half a decimal.
-    exact = float(np.ptp(differences)) < _ROUNDOFF * step
+    exact = float(np.ptp(differences)) < min(_ROUNDOFF * step, resolution / 2)
     tolerance = _ROUNDOFF * step if exact else resolution / length
     return StepEstimate(float(stretch[-1] - stretch[0]) / length, length, tolerance)
 

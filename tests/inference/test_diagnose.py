@@ -11,7 +11,13 @@ from bayesglm.inference.diagnose import Commands, SamplerSummary, summarise_samp
 from bayesglm.inference.sample import Chains
 from bayesglm.verdict import Reason
 
-COMMANDS = Commands("bayesglm check a.csv", "bayesglm fit narrower", "bayesglm fit longer")
+COMMANDS = Commands(
+    check="bayesglm check a.csv",
+    narrower="bayesglm fit narrower",
+    one_drive="bayesglm fit one_drive",
+    calibrated="bayesglm fit calibrated",
+    more_draws="bayesglm fit longer",
+)
 GOOD = SamplerSummary(rhat_max=1.0, ess_min=1000.0, bfmi_min=1.0, divergences=0)
 
 
@@ -160,6 +166,7 @@ def test_a_unit_that_decides_is_named() -> None:
         (diagnose.prior_reasons({"input": np.array([0.9, 0.1])}, COMMANDS), "passed"),
         (diagnose.prior_reasons({"input": np.array([0.9, 0.9, 0.1])}, COMMANDS), "caution"),
         (diagnose.prior_reasons({"input": np.array([0.9, 0.81])}, COMMANDS), "failed"),
+        (diagnose.prior_reasons({"input": np.array([0.9, 0.81, np.nan])}, COMMANDS), "failed"),
         (diagnose.prior_reasons({"input": np.array([])}, COMMANDS), "failed"),
     ],
 )
@@ -182,3 +189,5 @@ def test_reasons_name_the_kernel_in_check_and_words() -> None:
     assert "after-spike kernel η" in rows[1].advice
     told = diagnose.drive_reason("after_spike", 5.0, "−0.1 mV at 50 pA", COMMANDS)
     assert told.value == "5.0 sd apart: −0.1 mV at 50 pA"
+    assert told.command == COMMANDS.one_drive
+    assert diagnose.drive_reason("input", 5.0, "", COMMANDS).command == COMMANDS.narrower

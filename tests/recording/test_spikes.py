@@ -122,9 +122,9 @@ def test_origin_is_told_in_words() -> None:
     sweep = Sweep(0, np.zeros(9), np.zeros(9), np.ones(9, dtype=bool))
     recording = Recording("a", STEP, (sweep,))
     crossing = detect_spikes(recording, CROSSING).spikes_from
-    assert "peaks of at least -10 mV with a rise of at least 10 mV/ms" in crossing
+    assert "peaks of at least −10 mV with a rise of at least 10 mV/ms" in crossing
     assert "1 ms apart" in crossing
-    assert crossing.endswith("the first sample at or above -10 mV on the rise")
+    assert crossing.endswith("the first sample at or above −10 mV on the rise")
     assert detect_spikes(recording, PEAK).spikes_from.endswith("the sample of the peak")
 
 

@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import example, given
 from hypothesis import strategies as st
 
 from bayesglm.recording import timegrid
@@ -52,6 +52,7 @@ def test_step_is_found_behind_rounding(step: float, decimals: int, start: float)
     assert timegrid.jitter(times, found, np.array([], dtype=np.int64)) <= 0.51 * resolution
 
 
+@example(hertz=1001, decimals=7, n=5000)
 @given(
     hertz=st.integers(1000, 50_000),
     decimals=st.integers(3, 7),

@@ -85,7 +85,7 @@ def test_a_probability_is_never_zero_or_one(value: float, expected: str) -> None
             eta(-4.3, 0.6, -5.3, -3.3),
             (("50–125 pA", -0.1), ("150–225 pA", -4.0), ("250–300 pA", -5.3)),
             "30 ms after a spike the membrane is pulled down by 4.3 mV (90 % interval 3.3 to 5.3; "
-            "under this protocol; −0.1 mV at 50–125 pA, −5.3 mV at 250–300 pA).",
+            "under this protocol; η −0.1 mV at 50–125 pA, −5.3 mV at 250–300 pA).",
         ),
         (
             eta(2.04, 0.15, 1.8, 2.28),
@@ -103,7 +103,7 @@ def test_a_probability_is_never_zero_or_one(value: float, expected: str) -> None
             eta(-4.3, 0.6, -5.3, -3.3),
             (("50–125 pA", -2.0), ("150–225 pA", -6.0), ("250–300 pA", -3.0)),
             "30 ms after a spike the membrane is pulled down by 4.3 mV (90 % interval 3.3 to 5.3; "
-            "under this protocol; −2.0 mV at 50–125 pA, −6.0 mV at 150–225 pA, "
+            "under this protocol; η −2.0 mV at 50–125 pA, −6.0 mV at 150–225 pA, "
             "−3.0 mV at 250–300 pA).",
         ),
     ],
