@@ -8,6 +8,8 @@ from simulated_cells import neuron, recording_of_noise
 from bayesglm.fitting.run import fit
 from bayesglm.inference.results import CellFit
 from bayesglm.recording.recording import Recording
+from bayesglm.recording.settings import Settings
+from bayesglm.recording.settings_input import override
 
 
 @pytest.fixture(scope="session")
@@ -20,3 +22,9 @@ def linear_recording() -> Recording:
 def linear_fit(linear_recording: Recording) -> CellFit:
     """Its fit under default settings."""
     return fit(linear_recording)
+
+
+@pytest.fixture(scope="session")
+def white_fit(linear_recording: Recording) -> CellFit:
+    """Its fit as if residuals were white."""
+    return fit(linear_recording, override(Settings(), ["model.noise=white"]))

@@ -55,6 +55,11 @@ def test_no_estimate_travels_without_its_interval_and_monte_carlo_error(
             assert 0 <= feature.mean <= 1
             assert np.isnan([feature.sd, feature.lower, feature.upper]).all()
             continue
+        if np.isnan(feature.mean):
+            # A peak that does not exist has no interval either.
+            assert feature.name.startswith("after_spike_peak")
+            assert np.isnan([feature.sd, feature.lower, feature.upper, feature.mcse_mean]).all()
+            continue
         assert feature.lower <= feature.mean <= feature.upper
         if feature.sd > 0:
             assert feature.ess_bulk > 100

@@ -1,6 +1,6 @@
 """Coverage of bands and intervals on simulated recordings with correlated noise.
 
-    python tests/studies/coverage.py --recordings 50 > docs/coverage.md
+    python tests/studies/coverage_study.py --recordings 50 > docs/coverage.md
 
 Truth, noise and rates are those of `SCENARIOS`; kernels are made of the fitted splines, so that
 the basis can hold the truth. Each recording is fitted as a user would, with default settings but
@@ -249,7 +249,7 @@ def main() -> None:
         f"{arguments.recordings} recordings of {arguments.seconds:g} s a scenario, seed "
         f"{arguments.seed}, bayesglm {version('bayesglm')}, jax {version('jax')}, "
         f"{datetime.date.today().isoformat()}; "
-        "made by `tests/studies/coverage.py`. In brackets the 95 % Monte Carlo interval.\n"
+        "made by `tests/studies/coverage_study.py`. In brackets the 95 % Monte Carlo interval.\n"
     )
     print(
         "| scenario | truth | noise sd (time constant) | sweep sd | current mean, sd | "
