@@ -19,6 +19,8 @@ from bayesglm.recording.recording import FloatArray
 BUMP_MV = 0.25
 #: … for at least this long, ms.
 BUMP_MS = 5.0
+#: With fewer bumps than this share of the draws, height and time of the peak are left blank.
+_FEWEST_BUMPS = 0.05
 
 
 @dataclass(frozen=True, eq=False)
@@ -153,18 +155,21 @@ def _after_spike(
     highest = lowest + int(np.argmax(mean[lowest:]))
     peaks = curves[:, highest]
     peak_times = lags[lowest + np.argmax(curves[:, lowest:], axis=1)]
-    if highest == len(lags) - 1:
+    bump = has_bump(lags[lowest:], curves[:, lowest:])
+    if bump.mean() < _FEWEST_BUMPS:
         # The kernel only climbs back to its end, which is zero by construction: no peak.
         peaks, peak_times = np.full_like(peaks, np.nan), np.full_like(peak_times, np.nan)
+    minimum_times = lags[np.argmin(curves, axis=1)]
+    if lowest == 0:
+        # It falls towards the spike window's end: the minimum lies inside, where nothing is known.
+        minimum_times = np.full_like(minimum_times, np.nan)
     kernel = "after_spike"
     found = {
         "after_spike_minimum": FeatureDraws(kernel, "mV", curves[:, lowest]),
-        "after_spike_minimum_time": FeatureDraws(kernel, "ms", lags[np.argmin(curves, axis=1)]),
+        "after_spike_minimum_time": FeatureDraws(kernel, "ms", minimum_times),
         "after_spike_peak": FeatureDraws(kernel, "mV", peaks),
         "after_spike_peak_time": FeatureDraws(kernel, "ms", peak_times),
-        "after_spike_peak_probability": FeatureDraws(
-            kernel, "1", has_bump(lags[lowest:], curves[:, lowest:]), is_probability=True
-        ),
+        "after_spike_peak_probability": FeatureDraws(kernel, "1", bump, is_probability=True),
     }
     for lag in _reported_lags(design, report_at_ms):
         at = weights @ kernel_rows(design, kernel, np.array([lag]))[0]

@@ -109,7 +109,7 @@ def test_features_of_an_exponential_cell(resistance: float, tau: float) -> None:
     assert found["after_spike_at_100ms"][0] == pytest.approx(eta[199], abs=0.02)
     # A monotone undershoot is deepest where it is first seen, after the spike window.
     assert found["after_spike_minimum"][0] == pytest.approx(eta[10], abs=0.02)
-    assert found["after_spike_minimum_time"][0] == 5.5
+    assert np.isnan(found["after_spike_minimum_time"][0])
     assert found["after_spike_peak_probability"][0] == 0.0
     # It only climbs back to zero at its end, which is no peak.
     assert np.isnan([found["after_spike_peak"][0], found["after_spike_peak_time"][0]]).all()

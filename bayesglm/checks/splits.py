@@ -61,12 +61,12 @@ def exciting_units(digest: VoltageDigest, kernel: str) -> IntArray:
 def drive(digest: VoltageDigest) -> tuple[FloatArray, str]:
     """Drive of each unit and its unit of measure: mean current in pA, else firing rate in Hz.
 
-    Mean current tells units apart where it differs between them by more than chance; under a
-    stationary fluctuating current it does not, and the firing rate is taken.
+    Mean current tells units apart where it differs between them by more than chance. Under a
+    stationary fluctuating current it does not, and the firing rate is taken if there is one.
     """
     spread = float(digest.drive_nA.std())
     within = float(np.sqrt(np.mean(digest.current_sd_nA**2)))
-    if spread > 0.25 * within:
+    if spread > 0.25 * within or not digest.spikes.any():
         return digest.drive_nA * 1e3, "pA"
     return digest.spikes / digest.seconds, "Hz"
 
@@ -77,14 +77,18 @@ def drive_ranges(digest: VoltageDigest, kernel: str) -> tuple[IntArray, ...]:
     Returns
     -------
     tuple of arrays of unit indices
-        Empty where fewer than six units excite the kernel.
+        Empty where fewer than six units excite the kernel, or the lowest range and the highest
+        would have the same name.
     """
     units = exciting_units(digest, kernel)
     if len(units) < FEWEST_UNITS:
         return ()
     ordered = units[np.argsort(drive(digest)[0][units], kind="stable")]
     # array_split gives the extras to the first parts.
-    return tuple(np.asarray(part) for part in np.array_split(ordered, _RANGES))
+    ranges = tuple(np.asarray(part) for part in np.array_split(ordered, _RANGES))
+    if range_label(digest, ranges[0]) == range_label(digest, ranges[-1]):
+        return ()
+    return ranges
 
 
 def range_label(digest: VoltageDigest, units: IntArray) -> str:

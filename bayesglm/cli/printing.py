@@ -33,7 +33,7 @@ def print_reasons(title: str, reasons: Sequence[Reason]) -> None:
     table.add_column(overflow="fold")
     table.add_column(no_wrap=True)
     for row in reasons:
-        table.add_row(row.check.replace("_", " "), escape(row.value), _severity(row.verdict))
+        table.add_row(row.check.replace("_", " "), escape(row.value), _mark(row))
     console.print(table)
     print_advice(console, reasons)
     console.print()
@@ -82,6 +82,11 @@ def print_demo(result: DemoResult) -> None:
         console.print(line)
     console.print()
     console.print(f"report: {result.study.page}", soft_wrap=True)
+
+
+def _mark(row: Reason) -> Text:
+    # What was not measured did not pass.
+    return Text("–") if row.value.startswith("not measured") else _severity(row.verdict)
 
 
 def _severity(severity: Severity) -> Text:

@@ -7,6 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from bayesglm.checks.residuals import linearity
+from bayesglm.checks.splits import FEWEST_UNITS, exciting_units
 from bayesglm.fitting.posterior import Posterior
 from bayesglm.fitting.summary import Summary
 from bayesglm.inference import diagnose
@@ -49,7 +50,7 @@ def judge(
         ),
         *diagnose.ratio_reasons(calibration.ratio, commands),
         *diagnose.half_reasons(summary.halves, commands),
-        *(_drive_reason(split, commands) for split in summary.splits.values()),
+        *(_drive_reason(split, digest, commands) for split in summary.splits.values()),
         diagnose.linearity_reason(bent.share, commands),
         *diagnose.prior_reasons(
             {name: summary.kernels[name].prior_share[at] for name, at in known.items()}, commands
@@ -72,9 +73,10 @@ def judge(
     )
 
 
-def _drive_reason(split: Split, commands: diagnose.Commands) -> Reason:
+def _drive_reason(split: Split, digest: VoltageDigest, commands: diagnose.Commands) -> Reason:
     if not split.ranges:
-        return diagnose.drive_reason(split.kernel, None, "", commands)
+        exciting = len(exciting_units(digest, split.kernel))
+        return diagnose.unsplit_reason(split.kernel, exciting, FEWEST_UNITS, commands)
     feature, words, unit, digits = _shown(split)
     told = ", ".join(
         f"{fixed(one.features[feature][0], digits)} {unit} at {one.label}" for one in split.ranges

@@ -14,7 +14,7 @@ from bayesglm.fitting.judge import judge
 from bayesglm.fitting.posterior import sample_posterior
 from bayesglm.fitting.summary import summarise
 from bayesglm.inference.results import CellFit
-from bayesglm.inference.setup import make_digest, resolve_design
+from bayesglm.inference.setup import make_digest, resolve_design, settle
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.calibration import calibrate
 from bayesglm.models.priors import weight_prior
@@ -89,6 +89,7 @@ def fit(
     with threadpool_limits(1, user_api="blas"):
         with clock.stage("digest"):
             design = resolve_design(recordings, settings)
+            recordings = settle(recordings, design.input.duration_ms, settings)
             prior = weight_prior(design, settings.priors)
             digest, least = make_digest(recordings, design, prior, settings)
         with clock.stage("calibrate"):

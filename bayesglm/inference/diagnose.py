@@ -216,7 +216,7 @@ def half_reasons(disagreements: dict[str, float], commands: Commands) -> list[Re
     ]
 
 
-def drive_reason(kernel: str, disagreement: float | None, told: str, commands: Commands) -> Reason:
+def drive_reason(kernel: str, disagreement: float, told: str, commands: Commands) -> Reason:
     """Row on the split by drive of one kernel.
 
     Parameters
@@ -224,22 +224,12 @@ def drive_reason(kernel: str, disagreement: float | None, told: str, commands: C
     kernel
         Name of the kernel.
     disagreement
-        How far the ranges are apart in sds; None where too few units excite the kernel.
+        How far the ranges are apart at the worst lag, in sds.
     told
         What each range says, in words.
     commands
         Commands to copy.
     """
-    sign = KERNEL_SIGNS[kernel]
-    if disagreement is None:
-        return Reason(
-            f"drive_split_{kernel}",
-            "too few units to split by drive",
-            "≥ 6 units that excite it",
-            "caution",
-            f"whether the {sign} depends on the drive cannot be told; record more sweeps",
-            commands.check,
-        )
     apart = disagreement > _DISAGREEMENT_LIMIT
     return Reason(
         f"drive_split_{kernel}",
@@ -248,9 +238,26 @@ def drive_reason(kernel: str, disagreement: float | None, told: str, commands: C
         _grade(not apart),
         *_when(
             apart,
-            f"the {sign} depends on the drive: it belongs to this protocol, and the protocol "
-            "columns say how far",
+            f"the {KERNEL_SIGNS[kernel]} depends on the drive: it belongs to this protocol, and "
+            "the protocol columns say how far",
             commands.other_range(kernel),
+        ),
+    )
+
+
+def unsplit_reason(kernel: str, exciting: int, fewest: int, commands: Commands) -> Reason:
+    """Row on a kernel that could not be split by drive: too few units, or all driven alike."""
+    few = exciting < fewest
+    return Reason(
+        f"drive_split_{kernel}",
+        f"{exciting} units excite it" if few else "not split: units do not differ in drive",
+        f"≥ {fewest} units that excite it",
+        _grade(not few),
+        *_when(
+            few,
+            f"whether the {KERNEL_SIGNS[kernel]} depends on the drive cannot be told; record more "
+            "sweeps",
+            commands.check,
         ),
     )
 

@@ -22,6 +22,7 @@ from bayesglm.models.cell import conditional_weights, voltage_evidence
 from bayesglm.models.priors import WeightPrior, weight_prior
 from bayesglm.recording.loading import load_cell
 from bayesglm.recording.recording import FloatArray, Recording
+from bayesglm.recording.selection import leave_out_unsettled
 from bayesglm.recording.settings import KernelSection, Settings
 from bayesglm.recording.steps import membrane_time_constant
 from bayesglm.recording.study import CellEntry
@@ -116,9 +117,19 @@ def resolve_design(recordings: Sequence[Recording], settings: Settings) -> Volta
         return design(sections.input.duration_ms)
     tau = _time_constant_from_steps(recordings)
     if tau is None:
-        tau = _time_constant_from_fit(recordings, design(longest_input), settings)
+        settled = settle(recordings, longest_input, settings)
+        tau = _time_constant_from_fit(settled, design(longest_input), settings)
     lower = min(_INPUT_BOUNDS_MS[0], room)
     return design(float(np.round(np.clip(_TIME_CONSTANTS * tau, lower, longest_input))))
+
+
+def settle(
+    recordings: Sequence[Recording], duration_ms: float, settings: Settings
+) -> tuple[Recording, ...]:
+    """Leave out the unsettled beginnings of sweeps, where the settings want it."""
+    if not settings.model.leave_out_unsettled:
+        return tuple(recordings)
+    return tuple(leave_out_unsettled(recording, duration_ms) for recording in recordings)
 
 
 def make_digest(

@@ -117,6 +117,11 @@ def leading_samples(current: FloatArray, step_ms: float) -> int:
     return max(1, int(np.argmax(away))) if away.any() else len(current)
 
 
+def begins_settled(current: FloatArray, step_ms: float) -> bool:
+    """Return whether a sweep begins with a constant current, which may be what was before it."""
+    return leading_samples(current, step_ms) >= samples_in(SHORTEST_RUN_MS, step_ms)
+
+
 def samples_in(ms: float, step_ms: float) -> int:
     """Return the number of samples in `ms`, at least one."""
     return max(1, round(ms / step_ms))

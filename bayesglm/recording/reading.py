@@ -22,6 +22,8 @@ from bayesglm.units import UNIT_FACTORS, parse_header
 
 #: Largest values a current-clamp recording can hold; more means the header's unit is wrong.
 MAX_VOLTAGE_MV = 1000.0
+#: No recording of a membrane stays this close to zero throughout, mV: such a file holds volts.
+MIN_VOLTAGE_MV = 1.0
 MAX_CURRENT_NA = 100.0
 
 SPIKES_FROM_FILE = "spike column of the file"
@@ -154,6 +156,12 @@ def _refuse_values(table: TextTable, quantity: str, column: _Column, values: Flo
             np.abs(values) * column.factor > MAX_VOLTAGE_MV,
             f"at most {MAX_VOLTAGE_MV:g} mV either side of 0; the unit in the header is probably "
             "wrong (voltage_mV or voltage_V)",
+        )
+        small = np.nanmax(np.abs(values), initial=0.0) * column.factor < MIN_VOLTAGE_MV
+        refuse(
+            np.isfinite(values) & small,
+            f"values beyond {MIN_VOLTAGE_MV:g} mV somewhere in the file; the unit in the header "
+            "is probably wrong (voltage_mV or voltage_V)",
         )
     elif quantity == "current":
         refuse(

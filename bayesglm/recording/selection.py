@@ -12,6 +12,7 @@ from dataclasses import replace
 import numpy as np
 
 from bayesglm.errors import InputError, nearest
+from bayesglm.recording.current import begins_settled
 from bayesglm.recording.ranges import RANGES, Range, format_sweeps, parse_range, parse_sweeps
 from bayesglm.recording.recording import BoolArray, FloatArray, Recording, Sweep
 from bayesglm.recording.settings import RowSelection, SelectSection
@@ -125,6 +126,41 @@ def select(recording: Recording, section: SelectSection) -> Recording:
     if not any(sweep.keep.any() for sweep in result.sweeps):
         _nothing_left(recording, stated)
     return result
+
+
+def leave_out_unsettled(recording: Recording, duration_ms: float) -> Recording:
+    """Leave out the beginning of sweeps that begin under a changing current.
+
+    The voltage there still answers to a current that was not recorded. A sweep that would be
+    left out whole stays: `fit` refuses it by itself where nothing else is left.
+
+    Parameters
+    ----------
+    recording
+        The recording.
+    duration_ms
+        How long the voltage answers: the duration of the input kernel, ms.
+
+    Returns
+    -------
+    Recording
+        With `keep` false there, and a sentence in `left_out`.
+    """
+    samples = round(duration_ms / recording.step_ms)
+    sweeps, cut = [], 0
+    for sweep in recording.sweeps:
+        if samples < sweep.n_samples and not begins_settled(sweep.current, recording.step_ms):
+            keep = sweep.keep.copy()
+            keep[:samples] = False
+            sweep, cut = replace(sweep, keep=keep), cut + 1
+        sweeps.append(sweep)
+    if not cut:
+        return recording
+    told = (
+        f"the first {duration_ms:.0f} ms of {cut} of {len(sweeps)} sweeps, which do not begin with "
+        "a constant current: what drove the cell before is unknown"
+    )
+    return replace(recording, sweeps=tuple(sweeps), left_out=(*recording.left_out, told))
 
 
 def refuse_defects(recording: Recording) -> None:

@@ -22,7 +22,9 @@ class Section(BaseModel):
 class StudySection(Section):
     """What the study is called."""
 
-    name: str = Field(default="study", description="name shown in the report")
+    name: str = Field(
+        default="", description="name shown in the report; default the names of the cells"
+    )
     notes: str = Field(default="", description="free text shown in the report")
 
 
@@ -151,6 +153,11 @@ class ModelSection(Section):
     )
     spike_window_ms: tuple[float, float] = Field(
         default=(-1.0, 5.0), description="rows in this window around each spike are left out, ms"
+    )
+    leave_out_unsettled: bool = Field(
+        default=True,
+        description="leave out the first input kernel's length of each sweep that does not begin "
+        "with 20 ms of constant current: what drove the cell before it is unknown",
     )
     sweep_offsets: bool = Field(default=True, description="each sweep has an offset of its own")
     units: Literal["auto", "sweep", "block"] = Field(

@@ -183,6 +183,12 @@ def read_study(path: str | Path) -> Study:
             )
         path = path / "study.toml"
     settings = read_settings(path)
+    for name in ("cells.csv", "recordings.csv"):
+        if not (path.parent / name).is_file():
+            raise InputError(
+                f"{path}: no {name} beside it; a study needs cells.csv and recordings.csv (one "
+                "recording can be given by itself, and its settings with --set KEY=VALUE)"
+            )
     cells = _read_cells(path.parent / "cells.csv")
     files = read_listing(path.parent / "recordings.csv", _RECORDING_COLUMNS, _OPTIONAL_COLUMNS)
     entries: dict[tuple[str, str], list[RecordingEntry]] = {}

@@ -96,8 +96,9 @@ def fit_to_folder(
     write_study(fits, out)
     page = out / "report" / "index.html"
     page.parent.mkdir(exist_ok=True)
-    settings = study.settings.study
-    write_page(fits, page, settings.name, settings.notes, truths, figures)
+    told = study.settings.study
+    title = told.name or ", ".join(dict.fromkeys(one.cell for one in fits))
+    write_page(fits, page, title, told.notes, truths, figures)
     return StudyResult(tuple(fits), out, page)
 
 

@@ -32,7 +32,7 @@ _FEATURES: Final = {
     "input_resistance": "Input resistance",
     "membrane_time_constant": "Membrane time constant",
     "offset": "Offset E: voltage at zero recorded current",
-    "electrode_resistance": "Electrode term, an unbalanced bridge",
+    "electrode_resistance": "Electrode term: response in the same sample",
     "noise_sd": "Sd of the residual",
     "after_spike_minimum": "Minimum of η",
     "after_spike_minimum_time": "Time of the minimum of η",

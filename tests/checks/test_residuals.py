@@ -25,9 +25,9 @@ from bayesglm.recording.recording import FloatArray, Recording
 DESIGN = VoltageDesign(KernelSpec(150.0), None)
 
 
-def subthreshold(bend: float, seed: int = 1, noise_mV: float = 0.5) -> Recording:
+def subthreshold(bend: float, seed: int = 1, tau_ms: float = 10.0) -> Recording:
     """A cell without spikes whose voltage bends: v + bend·(v + 65)²."""
-    cell = neuron(threshold_mV=100.0, noise=Noise((noise_mV,), (10.0,)))
+    cell = neuron(threshold_mV=100.0, noise=Noise((0.5,), (tau_ms,)))
     recording = recording_of_noise(cell, seed, n_sweeps=8, mean_nA=0.0)
     return replace(
         recording,
@@ -47,8 +47,20 @@ def share_of(recording: Recording) -> tuple[float, FloatArray]:
 
 
 def test_a_linear_cell_leaves_nothing_that_follows_the_prediction() -> None:
-    """Chance is taken off: the mean over 8 recordings is below half a percent."""
-    assert np.mean([share_of(subthreshold(0.0, seed))[0] for seed in range(8)]) < 0.005
+    shares = [share_of(subthreshold(0.0, seed, tau_ms=60.0))[0] for seed in range(8)]
+    assert np.mean(shares) < 0.005
+
+
+def test_what_ten_bins_of_correlated_noise_may_share_is_taken_off() -> None:
+    """Nine degrees of freedom over rows two correlation times apart: 9 · 2 · 50 ms/32 s."""
+    recording = subthreshold(0.03)
+    digest = voltage_digest((recording,), DESIGN, 1000.0)
+    weights = least_squares(digest, column_scale(digest)).weights
+    plain, corrected = (
+        linearity((recording,), DESIGN, weights, correlation_ms).share
+        for correlation_ms in (0.0, 50.0)
+    )
+    assert plain - corrected == pytest.approx(9 * 2 * 50 / 32_000, rel=0.02)
 
 
 def test_a_bent_cell_leaves_a_parabola() -> None:

@@ -52,7 +52,7 @@ def grades(reasons: list[Reason]) -> dict[str, str]:
     [(0.0, 1.0, 1.0), (1.0, 1.0, 1.10), (0.0, 3.0, 1.16)],
 )
 def test_rhat_of_one_chain_shifted_or_spread(offset: float, scale: float, rhat: float) -> None:
-    """Split and folded R̂ (Vehtari et al. 2021): one of four chains moved, or three times as wide."""
+    """Split and folded R̂ (Vehtari et al. 2021): one of four chains moved, or thrice as wide."""
     values = np.random.default_rng(0).normal(size=(4, 5000))
     values[0] = offset + scale * values[0]
     assert summary_of(values).rhat_max == pytest.approx(rhat, abs=0.02)
@@ -160,7 +160,7 @@ def test_a_unit_that_decides_is_named() -> None:
         (diagnose.half_reasons({"after_spike": 3.1}, COMMANDS), "caution"),
         ([diagnose.drive_reason("input", 3.0, "", COMMANDS)], "passed"),
         ([diagnose.drive_reason("input", 3.1, "told", COMMANDS)], "caution"),
-        ([diagnose.drive_reason("input", None, "", COMMANDS)], "caution"),
+        ([diagnose.unsplit_reason("input", 5, 6, COMMANDS)], "caution"),
         ([diagnose.linearity_reason(0.10, COMMANDS)], "passed"),
         ([diagnose.linearity_reason(0.11, COMMANDS)], "caution"),
         (diagnose.prior_reasons({"input": np.array([0.9, 0.1])}, COMMANDS), "passed"),

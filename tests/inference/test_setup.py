@@ -87,8 +87,14 @@ def test_kernels_last_at_most_half_the_longest_sweep() -> None:
 def test_stated_values_stand() -> None:
     settings = override(
         Settings(),
-        ["kernels.input.duration_ms=77", "kernels.input.weights=9", "kernels.after_spike.warp_ms=5"]
-        + ["model.row_ms=1", "kernels.electrode.include=false", "model.spike_window_ms=[-2, 4]"],
+        [
+            "kernels.input.duration_ms=77",
+            "kernels.input.weights=9",
+            "kernels.after_spike.warp_ms=5",
+            "kernels.electrode.include=false",
+            "model.row_ms=1",
+            "model.spike_window_ms=[-2, 4]",
+        ],
     )
     design = resolve_design((step_recording(),), settings)
     assert (design.input.duration_ms, design.input.weights) == (77, 9)
@@ -173,7 +179,7 @@ def test_what_cannot_be_fitted_is_refused_before_anything_is_written(tmp_path: P
     assert not refuse_unusable(held_out, Settings())
     for assignment, message in {
         "model.row_ms=0.7": "a row of 0.7 ms is not a whole number of steps of 0.5 ms",
-        "kernels.input.duration_ms=1200": r"kernels\.input\.duration_ms is 1200 ms, but the longest",
+        "kernels.input.duration_ms=1200": r"kernels\.input\.duration_ms is 1200 ms, but the",
         "kernels.after_spike.duration_ms=1200": r"kernels\.after_spike\.duration_ms is 1200 ms",
     }.items():
         with pytest.raises(InputError, match=message):

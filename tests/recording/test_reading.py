@@ -193,12 +193,18 @@ def test_times_printed_too_coarsely(tmp_path: Path) -> None:
         read(tmp_path, HEAD + rows)
 
 
+def test_volts_under_a_header_of_millivolts(tmp_path: Path) -> None:
+    rows = "".join(f"{i * 0.1:.1f},{i % 7},-0.0652\n" for i in range(200))
+    with pytest.raises(InputError, match=r"found -0\.0652; .*beyond 1 mV.*voltage_V"):
+        read(tmp_path, HEAD + rows)
+
+
 @settings(suppress_health_check=[HealthCheck.function_scoped_fixture], max_examples=40)
 @given(
     columns=st.lists(
         st.tuples(
             st.floats(-5e3, 5e3, allow_subnormal=False),
-            st.floats(-500, 500, allow_subnormal=False) | st.just(float("nan")),
+            st.floats(-500, -1) | st.floats(1, 500) | st.just(float("nan")),
             st.booleans(),
         ),
         min_size=2,

@@ -132,7 +132,7 @@ def test_missing_tables_and_bad_settings(tmp_path: Path) -> None:
         read_study(tmp_path)
     write_study(tmp_path)
     (tmp_path / "cells.csv").unlink()
-    with pytest.raises(InputError, match=r"cells\.csv: no such file"):
+    with pytest.raises(InputError, match=r"no cells\.csv beside it"):
         read_study(tmp_path)
 
 
