@@ -38,6 +38,7 @@ LONGEST_FUNCTION = 80
 #: Modules without a test file of their own, and where they are tested.
 TESTED_IN = {
     "__main__.py": "cli/test_main.py",
+    "likelihood/least_squares.py": "likelihood/test_calibration.py",
     "likelihood/reference.py": "likelihood/test_voltage.py",
     "report/truth.py": "report/test_page.py",
     "report/page_cell.py": "report/test_page.py",

@@ -12,8 +12,9 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.stats import chi2, norm
 
-from bayesglm.likelihood.calibration import Calibration, calibrate, least_squares
+from bayesglm.likelihood.calibration import Calibration, calibrate
 from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.least_squares import least_squares
 from bayesglm.models.cell import conditional_weights, voltage_evidence
 from bayesglm.models.priors import WeightPrior
 from bayesglm.recording.recording import FloatArray, IntArray

@@ -12,8 +12,9 @@ from bayesglm.fitting.posterior import Posterior
 from bayesglm.fitting.summary import Summary
 from bayesglm.inference import diagnose
 from bayesglm.inference.results import Split, Verdict
-from bayesglm.likelihood.calibration import Calibration, correlation_time_ms
+from bayesglm.likelihood.calibration import Calibration
 from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.least_squares import correlation_time_ms
 from bayesglm.recording.linearity import linear_range
 from bayesglm.recording.ranges import format_sweeps
 from bayesglm.recording.recording import Recording

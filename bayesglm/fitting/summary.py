@@ -19,8 +19,9 @@ from bayesglm.features import FeatureDraws, feature_draws
 from bayesglm.fitting.posterior import Posterior, white_weights
 from bayesglm.inference.bands import WeightSummary, identified, kernel_rows, make_band
 from bayesglm.inference.results import Band, DriveRange, Feature, Split
-from bayesglm.likelihood.calibration import Calibration, inflation_within, noise_log_sd
+from bayesglm.likelihood.calibration import Calibration, inflation_within
 from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.least_squares import noise_log_sd
 from bayesglm.recording.recording import FloatArray, IntArray
 from bayesglm.recording.settings import Settings
 

@@ -10,13 +10,13 @@ import numpy as np
 
 from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign, default_row_ms, samples_per_row
-from bayesglm.likelihood.calibration import (
+from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.least_squares import (
     LeastSquares,
     correlation_time_ms,
     least_squares,
     with_sweep_offsets,
 )
-from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.likelihood.voltage import refuse_long_kernels, voltage_digest
 from bayesglm.models.cell import conditional_weights, voltage_evidence
 from bayesglm.models.priors import WeightPrior, weight_prior

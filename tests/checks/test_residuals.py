@@ -13,7 +13,7 @@ from bayesglm.checks.simulation import Noise
 from bayesglm.inference.results import CellFit
 from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign, row_means
-from bayesglm.likelihood.calibration import (
+from bayesglm.likelihood.least_squares import (
     LeastSquares,
     column_scale,
     correlation_time_ms,

@@ -19,8 +19,9 @@ from bayesglm.checks.splits import (
     range_label,
 )
 from bayesglm.inference.results import CellFit
-from bayesglm.likelihood.calibration import calibrate, column_scale, least_squares
+from bayesglm.likelihood.calibration import calibrate
 from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.least_squares import column_scale, least_squares
 from bayesglm.models.priors import weight_prior
 from bayesglm.recording.settings import PriorsSection
 

@@ -4,10 +4,9 @@ from __future__ import annotations
 
 import csv
 import json
+import re
 from collections.abc import Callable
 from pathlib import Path
-
-import re
 
 import arviz_base
 import arviz_stats

@@ -18,7 +18,7 @@ from bayesglm.inference.setup import (
     refuse_unusable,
     resolve_design,
 )
-from bayesglm.likelihood.calibration import correlation_time_ms
+from bayesglm.likelihood.least_squares import correlation_time_ms
 from bayesglm.models.priors import weight_prior
 from bayesglm.recording.recording import Recording
 from bayesglm.recording.settings import Settings

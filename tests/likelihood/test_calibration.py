@@ -22,19 +22,17 @@ from bayesglm.checks.simulation import Noise, simulate
 from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood import reference
-from bayesglm.likelihood.calibration import (
-    Calibration,
+from bayesglm.likelihood.calibration import Calibration, calibrate, inflation_within
+from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.least_squares import (
     LeastSquares,
-    calibrate,
     column_scale,
     correlation_time_ms,
-    inflation_within,
     least_squares,
     noise_log_sd,
     sandwich,
     with_sweep_offsets,
 )
-from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.likelihood.voltage import voltage_digest
 
 DESIGN = VoltageDesign(

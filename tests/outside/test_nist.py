@@ -15,7 +15,7 @@ import pytest
 from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood import reference
-from bayesglm.likelihood.calibration import LeastSquares, column_scale, least_squares
+from bayesglm.likelihood.least_squares import LeastSquares, column_scale, least_squares
 from bayesglm.likelihood.voltage import row_digest
 
 DATA = Path(__file__).resolve().parents[1] / "data"

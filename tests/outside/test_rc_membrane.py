@@ -12,7 +12,7 @@ from bayesglm.checks.simulation import Neuron, Noise, exponential_input, membran
 from bayesglm.features import feature_draws, resistance_row
 from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign
-from bayesglm.likelihood.calibration import column_scale, least_squares
+from bayesglm.likelihood.least_squares import column_scale, least_squares
 from bayesglm.likelihood.voltage import predict_rows, voltage_digest
 from bayesglm.recording.recording import Recording, Sweep
 

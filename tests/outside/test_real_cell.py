@@ -17,7 +17,8 @@ from bayesglm.features import reported_rows
 from bayesglm.fitting.run import fit
 from bayesglm.inference.results import CellFit
 from bayesglm.inference.setup import make_digest, resolve_design
-from bayesglm.likelihood.calibration import Calibration, calibrate, noise_log_sd
+from bayesglm.likelihood.calibration import Calibration, calibrate
+from bayesglm.likelihood.least_squares import noise_log_sd
 from bayesglm.models.priors import weight_prior
 from bayesglm.recording.reading import read_recording
 from bayesglm.recording.recording import FloatArray, Recording

@@ -10,7 +10,7 @@ from simulated_cells import arbitrary_recording, matrix_digest
 from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood import reference
-from bayesglm.likelihood.calibration import column_scale, least_squares, sandwich
+from bayesglm.likelihood.least_squares import column_scale, least_squares, sandwich
 from bayesglm.likelihood.offsets import reml_ratio, sweep_sums
 from bayesglm.likelihood.voltage import voltage_digest
 

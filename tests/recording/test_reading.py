@@ -22,7 +22,7 @@ def read(folder: Path, content: str, name: str = "cell.csv") -> Recording:
     return read_recording(path)
 
 
-def test_units_become_nA_mV_ms(tmp_path: Path) -> None:  # noqa: N802
+def test_units_become_nA_mV_ms(tmp_path: Path) -> None:
     small = read(tmp_path, "time_ms,current_pA,voltage_mV\n0,100,-65\n0.5,-50,-64\n1,0,-63\n")
     large = read(
         tmp_path, "time_s,current_nA,voltage_V\n0,.1,-.065\n.0005,-.05,-.064\n.001,0,-.063"

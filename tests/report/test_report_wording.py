@@ -97,7 +97,7 @@ def test_a_probability_is_never_zero_or_one(value: float, expected: str) -> None
             eta(-0.2, 0.3, -0.6, 0.3, lag="12.5"),
             (),
             "12.5 ms after a spike it is open whether the membrane is pulled down or lifted: "
-            "−0.2 mV (90 % interval −0.6 to 0.3, under this protocol).",
+            "−0.2 mV (90 % interval −0.6 to 0.3; under this protocol).",
         ),
         (
             eta(-4.3, 0.6, -5.3, -3.3),
