@@ -118,7 +118,7 @@ def make_band(
         between_range_sd=blank,
         protocol_lower=blank,
         protocol_upper=blank,
-        prior_share=np.divide(sd, prior_sd, out=np.full(len(lags), np.nan), where=prior_sd > 0),
+        prior_share=shown(np.divide(sd, prior_sd, out=blank.copy(), where=prior_sd > 0)),
     )
 
 

@@ -58,7 +58,8 @@ def _stated(settings: Settings) -> list[str]:
         if selected != key:
             words += ["--select", f"{selected}={value}"]
         else:
-            words += ["--set", f"{key}={json.dumps(value, ensure_ascii=False)}"]
+            shown = f"{value:g}" if isinstance(value, float) else json.dumps(value)
+            words += ["--set", f"{key}={shown}"]
     return words
 
 

@@ -31,7 +31,7 @@ def test_commands_keep_what_the_user_stated() -> None:
     words = shlex.split(fit_command([recording, recording], "current=-100:25pA", settings))
     assert words == [
         *("bayesglm", "fit", "cell.csv", "cell.csv", "--cell", "cell"),
-        *("--select", "sweeps=0-4", "--set", "kernels.input.duration_ms=200.0"),
+        *("--select", "sweeps=0-4", "--set", "kernels.input.duration_ms=200"),
         *("--select", "current=-100:25pA", "--out", "cell_selected"),
     ]
 
