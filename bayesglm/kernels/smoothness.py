@@ -5,6 +5,10 @@ kernel's prior sd, taken as the geometric mean over the axis, is one whatever th
 knots (Sørbye & Rue 2014, Spatial Statistics 8:39–51); the sampled scale is then an sd in
 MΩ/ms or mV. Bends leave one direction free, the straight line on the warped axis that ends at
 zero; a weak ridge makes the prior proper there.
+
+A kernel that is large at short lags and small at long ones bends much more early than late, and a
+prior with one sd for all lags would iron out the early part. Where a kernel *falls*, the prior is
+put on ``k(s)·(1 + s/s0)`` instead: its sd then falls as ``1/(1 + s/s0)``.
 """
 
 from __future__ import annotations
@@ -43,13 +47,15 @@ class SmoothnessPrior:
         return self.bend / sd**2 + self.ridge / (RIDGE_FACTOR * scale) ** 2
 
 
-def smoothness_prior(spec: KernelSpec) -> SmoothnessPrior:
+def smoothness_prior(spec: KernelSpec, falls: bool = False) -> SmoothnessPrior:
     """Build the prior of one kernel.
 
     Parameters
     ----------
     spec
         The kernel's shape.
+    falls
+        Whether the prior sd falls with the lag as ``1/(1 + s/s0)``.
 
     Returns
     -------
@@ -62,9 +68,10 @@ def smoothness_prior(spec: KernelSpec) -> SmoothnessPrior:
     # abscissae), which clamped ends crowd, hence divided differences: a straight line on the
     # warped axis must be free of penalty.
     centres = _greville(spec)
-    differences = _divided_second_differences(centres)[:, :n]
+    lift = np.exp(centres * np.log1p(spec.duration_ms / spec.warp_ms)) if falls else np.ones(n + 1)
+    differences = (_divided_second_differences(centres) * lift)[:, :n]
     structure = differences.T @ differences
-    free = (1.0 - centres)[:n]
+    free = ((1.0 - centres) / lift)[:n]
     grid = np.expm1(
         np.linspace(0, 1, _GRID, endpoint=False) * np.log1p(spec.duration_ms / spec.warp_ms)
     )

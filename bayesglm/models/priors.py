@@ -15,6 +15,10 @@ from bayesglm.kernels.smoothness import RIDGE_FACTOR, smoothness_prior
 from bayesglm.recording.recording import FloatArray
 from bayesglm.recording.settings import PriorsSection
 
+#: Kernels whose prior sd falls with the lag. κ is tens of MΩ/ms at first, where electrode and
+#: dendrites charge, and hundredths after a few membrane time constants; η has no such range.
+_FALLING = ("input",)
+
 
 @dataclass(frozen=True)
 class PriorRow:
@@ -91,7 +95,7 @@ def weight_prior(design: VoltageDesign, priors: PriorsSection) -> WeightPrior:
     bend = np.zeros((len(design.kernels), n, n))
     scales = kernel_scales(priors)
     for k, (name, spec) in enumerate(design.kernels.items()):
-        place, smooth = columns[name], smoothness_prior(spec)
+        place, smooth = columns[name], smoothness_prior(spec, falls=name in _FALLING)
         bend[k, place, place] = smooth.bend
         fixed[place, place] = smooth.ridge / (RIDGE_FACTOR * scales[name]) ** 2
     return WeightPrior(
@@ -137,11 +141,12 @@ def prior_table(design: VoltageDesign, priors: PriorsSection) -> tuple[PriorRow,
         if name not in design.kernels:
             continue
         sign, unit = signs[name], units[name]
+        falling = " of κ(s)·(1 + s/s0)" if name in _FALLING else ""
         rows += [
             PriorRow(f"sd of {sign}", f"half-normal({scale:g})", unit, reasons[name]),
             PriorRow(
                 f"bends of {sign}",
-                f"second-order random walk, scaled to the sd of {sign}",
+                f"second-order random walk{falling}, scaled to the sd of {sign}",
                 unit,
                 "kernels are smooth on a logarithmic axis of lags, whatever the number of knots",
             ),

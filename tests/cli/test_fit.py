@@ -169,9 +169,11 @@ def test_folder_has_the_agreed_files_and_columns(fitted: Path) -> None:
     with (cell / "features.csv").open(encoding="utf-8") as file:
         features = {row["feature"]: row for row in csv.DictReader(file)}
     assert tuple(features["offset"]) == FEATURE_COLUMNS
-    # The membrane of `rows_of`: 80 MΩ, 15 ms (a step of 1 ms makes the latter 14.5).
-    resistance = features["input_resistance"]
-    assert float(resistance["lower"]) - 3 < 80 < float(resistance["upper"]) + 3
+    # The membrane of `rows_of` has 80 MΩ and 15 ms, and answers in the same sample with a
+    # fifteenth of that, which is the electrode term; κ is the rest.
+    for name, truth in (("input_resistance", 80 * 14 / 15), ("electrode_resistance", 80 / 15)):
+        sd = float(features[name]["sd"])
+        assert abs(float(features[name]["mean"]) - truth) < 3 * sd, name
     verdict = json.loads((cell / "verdict.json").read_text(encoding="utf-8"))
     assert verdict["spikes"] == 0
     assert any("after-spike kernel is left out" in note for note in verdict["warnings"])

@@ -82,3 +82,25 @@ def test_precision_scales_with_sd_and_scale() -> None:
     prior = smoothness_prior(KernelSpec(100.0, 8))
     expected = prior.bend / 9 + prior.ridge / (RIDGE_FACTOR * 5) ** 2
     np.testing.assert_allclose(prior.precision(3.0, 5.0), expected)
+
+
+@pytest.mark.parametrize("weights", [10, 20, 40])
+def test_a_falling_prior_falls_whatever_the_knots(weights: int) -> None:
+    def sds(n: int, falls: bool) -> np.ndarray:
+        spec = KernelSpec(300.0, n)
+        lags = np.array([1.0, 10.0, 50.0, 150.0])
+        basis = spec.evaluate(lags)
+        covariance = np.linalg.inv(smoothness_prior(spec, falls).precision(1.0, 0.5))
+        return np.sqrt(np.einsum("lj,jk,lk->l", basis, covariance, basis))
+
+    np.testing.assert_allclose(sds(weights, True), sds(14, True), rtol=0.15)
+    falling, level = sds(weights, True), sds(weights, False)
+    assert falling[-1] / falling[0] < 0.1 * level[-1] / level[0]
+
+
+@pytest.mark.parametrize("weights", [8, 14, 30])
+def test_the_mean_sd_of_a_falling_prior_is_one(weights: int) -> None:
+    spec = KernelSpec(300.0, weights)
+    prior = smoothness_prior(spec, falls=True)
+    _, sd = kernel_sd(spec, np.linalg.pinv(prior.bend, rcond=1e-12, hermitian=True))
+    assert np.exp(np.mean(np.log(sd))) == pytest.approx(1.0, rel=0.02)
