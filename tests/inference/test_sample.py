@@ -151,12 +151,14 @@ def test_divergence_is_tried_again_once_with_shorter_steps(
 
 def funnel(data: jax.Array) -> None:
     """A funnel whose neck no step size fits: a target for divergences."""
-    v = numpyro.sample("v", dist.Normal(0.0, 6.0))
+    v = numpyro.sample("v", dist.Normal(0.0, 9.0))
     numpyro.sample("x", dist.Normal(jnp.zeros(9), jnp.exp(v / 2)).to_event(1))
     numpyro.factor("data", 0.0 * data)
 
 
 def test_a_funnel_is_seen_to_diverge() -> None:
     """Negative control: trouble is told, not hidden."""
-    short = SamplingSection(chains=2, warmup=100, draws=200, target_accept=0.6)
-    assert nuts(funnel, jnp.zeros(()), short, jax.random.key(0)).diverging.any()
+    short = SamplingSection(chains=4, warmup=100, draws=500, target_accept=0.6)
+    # A single run may miss the neck; the streams of random numbers differ between versions.
+    runs = (nuts(funnel, jnp.zeros(()), short, jax.random.key(seed)) for seed in range(6))
+    assert any(run.diverging.any() for run in runs)
