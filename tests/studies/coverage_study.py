@@ -1,6 +1,6 @@
 """Coverage of bands and intervals on simulated recordings with correlated noise.
 
-    python tests/studies/coverage_study.py --recordings 50 > docs/coverage.md
+    python tests/studies/coverage_study.py --recordings 100 > docs/coverage.md
 
 Truth, noise and rates are those of `SCENARIOS`; kernels are made of the fitted splines, so that
 the basis can hold the truth. Each recording is fitted as a user would, with default settings but
@@ -236,7 +236,7 @@ def with_error(values: Sequence[float]) -> str:
 def main() -> None:
     """Run the study and print its table."""
     parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--recordings", type=int, default=50)
+    parser.add_argument("--recordings", type=int, default=100)
     parser.add_argument("--seconds", type=float, default=40.0)
     parser.add_argument("--seed", type=int, default=2026)
     arguments = parser.parse_args()
