@@ -126,6 +126,6 @@ def _line(cell: str, feature: Feature, truth: float) -> str:
     places = decimals(feature.sd, feature.mean)
     return (
         f"{cell}, {feature_label(feature.name)}: "
-        f"{with_unit(feature.mean, places, feature.unit)} ({percent(feature.level)} interval "
+        f"{with_unit(feature.mean, places, feature.unit)} ("
         f"{interval(feature.lower, feature.upper, places)}; truth {rounded(truth, places)})"
     )
