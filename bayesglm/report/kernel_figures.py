@@ -12,6 +12,7 @@ from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
 
 from bayesglm.inference.results import Band, CellFit, Split
+from bayesglm.recording.recording import FloatArray
 from bayesglm.report.style import (
     BLUE,
     GREY,
@@ -26,7 +27,10 @@ from bayesglm.report.style import (
 from bayesglm.report.truth import Truth
 
 KERNEL_TITLES: Final = {"input": "Input kernel κ", "after_spike": "After-spike kernel η"}
-_X_LABELS: Final = {"input": "Lag (ms)", "after_spike": "Time after the spike (ms)"}
+_X_LABELS: Final = {
+    "input": "Lag (ms, compressed scale)",
+    "after_spike": "Time after the spike (ms)",
+}
 _Y_LABELS: Final = {"input": "κ (MΩ/ms)", "after_spike": "η (mV)"}
 _BAND_ALPHA: Final = 0.25
 _TRUTH_STYLE: Final[dict[str, Any]] = {"color": INK, "linewidth": 1.0, "linestyle": (0, (5, 3))}
@@ -34,6 +38,10 @@ _WHITE_STYLE: Final[dict[str, Any]] = {"color": GREY, "linewidth": 0.9, "linesty
 #: A range of drive that says little must not flatten the kernel: the axis is stretched for it at
 #: each end by at most this share of the height of the bands.
 _LARGEST_STRETCH: Final = 0.2
+
+
+_WARP_MS = 2.0
+_WARPED_TICKS_MS = (0, 1, 2, 5, 10, 20, 50, 100, 200, 400)
 
 
 def drawn_kernels(fit: CellFit) -> list[str]:
@@ -129,10 +137,23 @@ def _range_curves(axes: Axes, band: Band, split: Split | None) -> list[Line2D]:
 
 def _dress(axes: Axes, name: str, longest_ms: float) -> None:
     axes.axhline(0.0, color=GREY, linewidth=0.5, zorder=0.5)
+    if name == "input":
+        # κ falls within the first ms to a fraction of its beginning and lasts for hundreds: as
+        # on the axis of its knots, both are seen.
+        axes.set_xscale("function", functions=(_warp, _unwarp))
+        axes.set_xticks([tick for tick in _WARPED_TICKS_MS if tick <= longest_ms])
     axes.set_xlim(0, longest_ms)
     axes.set_title(KERNEL_TITLES[name])
     axes.set_xlabel(_X_LABELS[name])
     label_y(axes, _Y_LABELS[name])
+
+
+def _warp(lags_ms: FloatArray) -> FloatArray:
+    return np.log1p(np.maximum(lags_ms, 0.0) / _WARP_MS)
+
+
+def _unwarp(warped: FloatArray) -> FloatArray:
+    return _WARP_MS * np.expm1(warped)
 
 
 def _within(

@@ -12,7 +12,7 @@ from bayesglm.report import figures
 from bayesglm.report.style import as_svg
 
 LABELS = {
-    "kernels": ("κ (MΩ/ms)", "η (mV)", "Lag (ms)", "Time after the spike (ms)"),
+    "kernels": ("κ (MΩ/ms)", "η (mV)", "Lag (ms, compressed scale)", "Time after the spike (ms)"),
     "prediction": ("Voltage (mV)", "Residual (mV)", "Time (ms)"),
     "traces": ("Voltage (mV)", "Current (pA)", "Time (ms)"),
     "residuals": ("Lag (ms)", "Frequency (Hz)", "Power density (mV²/Hz)"),
