@@ -15,7 +15,7 @@ from scipy.stats import chi2, norm
 from bayesglm.likelihood.calibration import Calibration, calibrate
 from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.likelihood.least_squares import least_squares
-from bayesglm.models.cell import conditional_weights, voltage_evidence
+from bayesglm.models.cell import voltage_evidence, weight_moments
 from bayesglm.models.priors import WeightPrior
 from bayesglm.recording.recording import FloatArray, IntArray
 from bayesglm.recording.wording import fixed
@@ -136,9 +136,7 @@ def estimate_part(
     fit = least_squares(part, prior.root, whole.fit.offset_ratio, whole.fit.offset_variance)
     calibration = calibrate(part, fit, np.empty((0, digest.design.n_weights)), inflation)
     evidence = voltage_evidence(fit.weights, calibration.precision, fit.rank, whole.freedom, prior)
-    mean, factor = conditional_weights(evidence, sd[None], np.ones(1))
-    root = prior.root @ np.linalg.inv(factor[0]).T
-    return PartEstimate(units, prior.mean + prior.root @ mean[0], root @ root.T)
+    return PartEstimate(units, *weight_moments(evidence, prior, sd))
 
 
 def disagreement(means: FloatArray, sds: FloatArray) -> float:

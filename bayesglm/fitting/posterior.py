@@ -12,10 +12,10 @@ from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.calibration import Calibration
 from bayesglm.models.cell import (
     VoltageEvidence,
-    conditional_weights,
     draw_weights,
     voltage_evidence,
     voltage_model,
+    weight_moments,
 )
 from bayesglm.models.priors import WeightPrior
 from bayesglm.recording.recording import FloatArray
@@ -80,10 +80,7 @@ def white_weights(
     calibration: Calibration, prior: WeightPrior, kernel_sd: FloatArray
 ) -> tuple[FloatArray, FloatArray]:
     """Mean, (P,), and covariance, (P, P), of the weights if residuals were white."""
-    evidence = _evidence(calibration, prior, white=True)
-    mean, factor = conditional_weights(evidence, kernel_sd[None], np.ones(1))
-    root = prior.root @ np.linalg.inv(factor[0]).T
-    return prior.mean + prior.root @ mean[0], root @ root.T
+    return weight_moments(_evidence(calibration, prior, white=True), prior, kernel_sd)
 
 
 def _evidence(calibration: Calibration, prior: WeightPrior, white: bool) -> VoltageEvidence:

@@ -18,7 +18,7 @@ from bayesglm.likelihood.least_squares import (
     with_sweep_offsets,
 )
 from bayesglm.likelihood.voltage import refuse_long_kernels, voltage_digest
-from bayesglm.models.cell import conditional_weights, voltage_evidence
+from bayesglm.models.cell import voltage_evidence, weight_moments
 from bayesglm.models.priors import WeightPrior, weight_prior
 from bayesglm.recording.loading import load_cell
 from bayesglm.recording.recording import FloatArray, Recording
@@ -211,8 +211,7 @@ def _time_constant_from_fit(
     digest = voltage_digest(recordings, design, None)
     fit = fit_digest(digest, prior.root, settings)
     evidence = voltage_evidence(fit.weights, _tempered(digest, fit), fit.rank, 1.0, prior)
-    mean, _ = conditional_weights(evidence, prior.sd_scale[None] / 4, np.ones(1))
-    weights = (prior.mean + prior.root @ mean[0])[design.columns["input"]]
+    weights = weight_moments(evidence, prior, prior.sd_scale / 4)[0][design.columns["input"]]
     lags = np.arange(1, int(design.input.duration_ms) + 1, dtype=np.float64)
     kernel = np.maximum(design.input.evaluate(lags) @ weights, 0.0)
     if kernel.sum() <= 0:

@@ -154,12 +154,19 @@ def _leave_one_out(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArray
     shares = np.einsum("pk,bpq,ql->bkl", fit.basis, lost[:, :-1, :-1], fit.basis)
     plain = np.append(-fit.weights, 1.0)
     scores = np.einsum("pk,bpq,q->bk", fit.basis, lost[:, :-1, :], plain)
+    return shares, np.einsum("bkl,bl->bk", _left_over_inverse(shares), scores)
+
+
+def _left_over_inverse(shares: FloatArray) -> FloatArray:
+    """``(I − L_b)⁻¹`` of each unit, leverage clipped, shape (B, K, K).
+
+    Where one unit carries nearly all, the rest says nothing and the change without it would be
+    noise over nothing; the spectral part then speaks for that direction.
+    """
     values, vectors = np.linalg.eigh(shares)
-    # Where one unit carries nearly all, the rest says nothing and the change would be noise
-    # over nothing; the spectral part then speaks for that direction.
     factor = 1.0 / (1.0 - np.clip(values, 0.0, _MAX_LEVERAGE))
-    changes = np.einsum("bkj,bj,blj,bl->bk", vectors, factor, vectors, scores)
-    return shares, changes
+    inverse: FloatArray = np.einsum("bkj,bj,blj->bkl", vectors, factor, vectors)
+    return inverse
 
 
 def _between_sweeps(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArray, FloatArray]:
@@ -249,11 +256,10 @@ def _satterthwaite(shares: FloatArray, contrasts: FloatArray) -> float:
     residuals these have covariance ``G_b(δ_bb' L_b − L_b L_b')G_b'`` with L the units' shares and
     ``G = (I − L)⁻¹``; matching two moments gives ν = (tr)²/tr(squared).
     """
-    values, vectors = np.linalg.eigh(shares)
-    inverse = 1.0 / (1.0 - np.clip(values, 0.0, _MAX_LEVERAGE))
+    inverse = _left_over_inverse(shares)
     smallest = float(len(shares) - 1)
     for contrast in contrasts:
-        moved = np.einsum("bkj,bj,blj,l->bk", vectors, inverse, vectors, contrast)
+        moved = inverse @ contrast
         pulled = np.einsum("bkl,bl->bk", shares, moved)
         cross = -pulled @ pulled.T
         cross[np.diag_indices_from(cross)] += np.einsum("bk,bk->b", moved, pulled)

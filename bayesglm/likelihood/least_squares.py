@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from bayesglm.likelihood.digest import VoltageDigest
-from bayesglm.likelihood.offsets import marginalise, reml_ratio, sweep_sums
+from bayesglm.likelihood.offsets import marginalise, reml_ratio, shrinkage, sweep_sums
 from bayesglm.recording.recording import FloatArray
 
 #: Directions with less than this share of the largest information count as never excited.
@@ -173,7 +173,7 @@ def spectral_covariance(digest: VoltageDigest, fit: LeastSquares) -> tuple[Float
     residual = residual_vectors(digest, fit)
     power = np.einsum("bi,bfij,bj->f", residual, digest.bands, residual)
     sums = sweep_sums(digest.gram, digest.sweep)
-    shrink = fit.offset_ratio / (1.0 + fit.offset_ratio * sums[:, 0, 0])
+    shrink = shrinkage(sums, fit.offset_ratio)
     # Columns with their sweep's offset taken out: x − c 1 (1ᵀX).
     columns = np.tile(fit.basis, (digest.n_units, 1, 1))
     columns[:, 0, :] -= (shrink[:, None] * (sums[:, 0, :-1] @ fit.basis))[digest.sweep]
@@ -205,8 +205,7 @@ def residual_vectors(digest: VoltageDigest, fit: LeastSquares) -> FloatArray:
     """Vectors a with ``zᵀa`` the residual of a row z = (x, v), sweep offset removed, (B, P + 1)."""
     sums = sweep_sums(digest.gram, digest.sweep)
     plain = np.append(-fit.weights, 1.0)
-    shrink = fit.offset_ratio / (1.0 + fit.offset_ratio * sums[:, 0, 0])
-    offsets = shrink * (sums[:, 0, :] @ plain)
+    offsets = shrinkage(sums, fit.offset_ratio) * (sums[:, 0, :] @ plain)
     vectors = np.tile(plain, (digest.n_units, 1))
     vectors[:, 0] -= offsets[digest.sweep]
     return vectors

@@ -31,6 +31,12 @@ def sweep_sums(gram: FloatArray, sweep: IntArray) -> FloatArray:
     return sums
 
 
+def shrinkage(sums: FloatArray, ratio: float) -> FloatArray:
+    """``c_s = ρ/(1 + n_s ρ)`` of each Gram matrix of a whole sweep, shape (...)."""
+    shrink: FloatArray = ratio / (1.0 + ratio * sums[..., 0, 0])
+    return shrink
+
+
 def marginalise(gram: FloatArray, ratio: float) -> FloatArray:
     """Take the offset out of Gram matrices of whole sweeps.
 
@@ -46,8 +52,9 @@ def marginalise(gram: FloatArray, ratio: float) -> FloatArray:
     ``Σ zzᵀ − c (Σz)(Σz)ᵀ``, same shape.
     """
     totals = gram[..., 0, :]
-    shrink = ratio / (1.0 + ratio * gram[..., 0, 0])
-    return gram - shrink[..., None, None] * totals[..., :, None] * totals[..., None, :]
+    return (
+        gram - shrinkage(gram, ratio)[..., None, None] * totals[..., :, None] * totals[..., None, :]
+    )
 
 
 def reml_ratio(sums: FloatArray, scale: FloatArray, tolerance: float) -> float:

@@ -147,6 +147,25 @@ def conditional_weights(
     return mean, factor
 
 
+def weight_moments(
+    evidence: VoltageEvidence, prior: WeightPrior, sd: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Mean, (P,), and covariance, (P, P), of the weights for given kernel sds and φ = 1.
+
+    Parameters
+    ----------
+    evidence
+        What the voltage says, in the coordinates of `prior`.
+    prior
+        Prior of the weights.
+    sd
+        Sd of each kernel, shape (n_kernels,).
+    """
+    mean, factor = conditional_weights(evidence, sd[None], np.ones(1))
+    root = prior.root @ np.linalg.inv(factor[0]).T
+    return prior.mean + prior.root @ mean[0], root @ root.T
+
+
 def draw_weights(
     evidence: VoltageEvidence, sd: FloatArray, phi: FloatArray, key: jax.Array
 ) -> FloatArray:

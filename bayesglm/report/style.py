@@ -43,7 +43,6 @@ SERIES: Final[tuple[tuple[str, Any], ...]] = (
 )
 
 DOUBLE_COLUMN_MM: Final = 180.0
-SINGLE_COLUMN_MM: Final = 85.0
 _PNG_DPI: Final = 200
 _POINTS_PER_MM: Final = 5.0
 
