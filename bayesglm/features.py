@@ -13,7 +13,7 @@ import numpy as np
 
 from bayesglm.inference.bands import identified, kernel_lags, kernel_rows
 from bayesglm.kernels.design import VoltageDesign
-from bayesglm.recording.recording import FloatArray
+from bayesglm.recording.recording import FloatArray, IntArray
 
 #: A bump is η above this, mV, …
 BUMP_MV = 0.25
@@ -52,16 +52,25 @@ def resistance_row(design: VoltageDesign, step_ms: float) -> FloatArray:
     return row
 
 
+def linear_features(
+    design: VoltageDesign, step_ms: float, report_at_ms: tuple[float, ...]
+) -> dict[str, FloatArray]:
+    """Features that are linear in the weights, by name, as combinations of them, shape (P,)."""
+    rows = {"input_resistance": resistance_row(design, step_ms)}
+    if design.after_spike is not None:
+        lags = _reported_lags(design, report_at_ms)
+        at_lags = kernel_rows(design, "after_spike", lags)
+        rows |= {f"after_spike_at_{lag:g}ms": row for lag, row in zip(lags, at_lags, strict=True)}
+    return rows
+
+
 def reported_rows(
     design: VoltageDesign, step_ms: float, report_at_ms: tuple[float, ...]
 ) -> FloatArray:
     """The reported scalars that are linear in the weights, shape (n, P): they set ν."""
     offset = np.zeros((1, design.n_weights))
     offset[0, 0] = 1.0
-    rows = [offset, resistance_row(design, step_ms)[None]]
-    if design.after_spike is not None:
-        rows.append(kernel_rows(design, "after_spike", _reported_lags(design, report_at_ms)))
-    return np.concatenate(rows)
+    return np.concatenate([offset, [*linear_features(design, step_ms, report_at_ms).values()]])
 
 
 def feature_draws(
@@ -89,11 +98,14 @@ def feature_draws(
     found = {
         "input_resistance": FeatureDraws("input", "MΩ", weights @ resistance_row(design, step_ms)),
         "membrane_time_constant": FeatureDraws("input", "ms", _time_constants(weights, design)),
+        "input_half_width": FeatureDraws(
+            "input", "ms", _input_half_widths(weights, design, step_ms)
+        ),
         "offset": FeatureDraws("", "mV", weights[:, design.columns["offset"].start]),
     }
     if "electrode" in design.columns:
         found["electrode_resistance"] = FeatureDraws(
-            "", "MΩ", weights[:, design.columns["electrode"].start]
+            "", "MΩ", weights[:, design.columns["electrode"]].sum(axis=1)
         )
     if design.after_spike is not None:
         found |= _after_spike(weights, design, report_at_ms)
@@ -108,6 +120,73 @@ def _time_constants(weights: FloatArray, design: VoltageDesign) -> FloatArray:
     # Where the kernel is pinned to zero its variance vanishes; such lags must not decide the fit.
     variance = np.maximum(variance, np.median(variance))
     return fit_exponentials(lags, curves, spacing / np.where(variance > 0, variance, 1.0))
+
+
+def _input_half_widths(weights: FloatArray, design: VoltageDesign, step_ms: float) -> FloatArray:
+    """Lag by which half of the input resistance is reached, ms, shape (D,); τ ln 2 if exponential.
+
+    Half of the largest value of κ would tell of its first sample alone: electrode and dendrites
+    make the first millisecond several times higher than the membrane's part, at a few percent of
+    the area. The area up to a lag is also what a step of current shows. NaN where the mean has no
+    positive area.
+    """
+    every = design.input.lags(step_ms)
+    area = np.cumsum(kernel_rows(design, "input", every), axis=0) * step_ms
+    ends = np.minimum(np.searchsorted(every, kernel_lags(design, "input") - 1e-9), len(every) - 1)
+    reached = weights @ area[ends].T
+    whole = weights @ area[-1]
+    if whole.mean() <= 0:
+        return np.full(len(weights), np.nan)
+    reached = np.concatenate([np.zeros((len(weights), 1)), reached], axis=1)
+    beyond = reached >= whole[:, None] / 2
+    beyond[:, 0], beyond[:, -1] = False, True
+    after = np.argmax(beyond, axis=1)
+    lags = np.concatenate([[0.0], every[ends]])
+    return _crossing(lags, reached, whole / 2, after)
+
+
+def _crossing(
+    lags_ms: FloatArray, curves: FloatArray, level: FloatArray, after: IntArray
+) -> FloatArray:
+    """Lag at which each curve crosses its level between index `after` − 1 and `after`, ms, (D,)."""
+    draw = np.arange(len(curves))
+    low, high = curves[draw, after - 1], curves[draw, after]
+    share = np.divide(level - low, high - low, out=np.zeros_like(low), where=high != low)
+    crossing: FloatArray = lags_ms[after - 1] + np.clip(share, 0.0, 1.0) * (
+        lags_ms[after] - lags_ms[after - 1]
+    )
+    return crossing
+
+
+def half_widths(lags_ms: FloatArray, curves: FloatArray, lowest: int) -> FloatArray:
+    """Width of the stretch around a minimum in which each curve is below half of it, ms.
+
+    Parameters
+    ----------
+    lags_ms
+        Shape (n,), ms.
+    curves
+        Shape (D, n), mV.
+    lowest
+        Index of the minimum of the mean curve; each curve's own value there sets its level.
+
+    Returns
+    -------
+    Shape (D,). Where the stretch is cut by the first lag or the last, it begins or ends there; 0
+    for a curve that is not negative at the minimum.
+    """
+    level = curves[:, lowest] / 2
+    above = curves > level[:, None]
+    right, left = above[:, lowest:], above[:, lowest::-1]
+    end = np.full(len(curves), lags_ms[-1])
+    start = np.full(len(curves), lags_ms[0])
+    ends, starts = right.any(axis=1), left.any(axis=1)
+    after = lowest + np.argmax(right, axis=1)
+    before = lowest - np.argmax(left, axis=1)
+    deep = level < 0
+    for found, which, index in ((end, ends & deep, after), (start, starts & deep, before + 1)):
+        found[which] = _crossing(lags_ms, curves[which], level[which], index[which])
+    return np.where(deep, end - start, 0.0)
 
 
 def fit_exponentials(lags_ms: FloatArray, curves: FloatArray, weight: FloatArray) -> FloatArray:
@@ -163,10 +242,14 @@ def _after_spike(
     if lowest == 0:
         # It falls towards the spike window's end: the minimum lies inside, where nothing is known.
         minimum_times = np.full_like(minimum_times, np.nan)
+    widths = half_widths(lags, curves, lowest)
+    if mean[lowest] >= 0:
+        widths = np.full_like(widths, np.nan)
     kernel = "after_spike"
     found = {
         "after_spike_minimum": FeatureDraws(kernel, "mV", curves[:, lowest]),
         "after_spike_minimum_time": FeatureDraws(kernel, "ms", minimum_times),
+        "after_spike_half_width": FeatureDraws(kernel, "ms", widths),
         "after_spike_peak": FeatureDraws(kernel, "mV", peaks),
         "after_spike_peak_time": FeatureDraws(kernel, "ms", peak_times),
         "after_spike_peak_probability": FeatureDraws(kernel, "1", bump, is_probability=True),

@@ -12,6 +12,7 @@ from bayesglm.checks.simulation import exponential_input
 from bayesglm.features import (
     feature_draws,
     fit_exponentials,
+    half_widths,
     has_bump,
     reported_rows,
     resistance_row,
@@ -180,7 +181,12 @@ def test_only_lags_that_are_known_are_reported() -> None:
 def test_without_spikes_and_electrode_their_features_are_absent() -> None:
     design = VoltageDesign(KernelSpec(100.0), None, electrode=False)
     found = feature_draws(np.ones((3, design.n_weights)), design, STEP_MS, (30.0,))
-    assert list(found) == ["input_resistance", "membrane_time_constant", "offset"]
+    assert list(found) == [
+        "input_resistance",
+        "membrane_time_constant",
+        "input_half_width",
+        "offset",
+    ]
     assert reported_rows(design, STEP_MS, (30.0,)).shape == (2, design.n_weights)
 
 
@@ -189,13 +195,63 @@ def test_units_and_kernels_of_the_features() -> None:
     assert {name: one.unit for name, one in found.items()} == {
         "input_resistance": "MΩ",
         "membrane_time_constant": "ms",
+        "input_half_width": "ms",
         "offset": "mV",
         "electrode_resistance": "MΩ",
         "after_spike_minimum": "mV",
         "after_spike_minimum_time": "ms",
+        "after_spike_half_width": "ms",
         "after_spike_peak": "mV",
         "after_spike_peak_time": "ms",
         "after_spike_peak_probability": "1",
         "after_spike_at_30ms": "mV",
     }
     assert [n for n, one in found.items() if one.is_probability] == ["after_spike_peak_probability"]
+
+
+@pytest.mark.parametrize("tau", [8.0, 20.0])
+def test_half_width_of_an_exponential_input_kernel_is_tau_ln_2(tau: float) -> None:
+    """Half of the area of R(1 − f)f^(k−1) is reached at τ ln 2."""
+    weights = cell_weights(100.0, tau, after_spike_kernel("monotone"))
+    assert features(weights)["input_half_width"][0] == pytest.approx(tau * np.log(2), rel=0.01)
+
+
+def test_half_width_is_hardly_moved_by_a_high_first_sample() -> None:
+    """3 MΩ of 100 in the first 0.3 ms, as of an electrode: κ starts three times as high."""
+    lags = STEP_MS * np.arange(1, 2000)
+    plain = exponential_input(100.0, 20.0, lags)
+    spiked = plain + np.where(lags < 0.35, 10.0, 0.0)
+    found = features(weights_of("input", spiked, lags))["input_half_width"][0]
+    assert spiked[0] > 2.5 * plain[0]
+    # Half of 103 MΩ, 3 of them at once: 100(1 − exp(−s/20)) = 48.5.
+    assert found == pytest.approx(-20 * np.log(1 - 0.485), rel=0.02)
+
+
+def test_half_width_needs_a_positive_area() -> None:
+    lags = STEP_MS * np.arange(1, 2000)
+    weights = weights_of("input", -exponential_input(100.0, 20.0, lags), lags)
+    assert np.isnan(features(weights)["input_half_width"]).all()
+
+
+def test_half_widths_of_known_shapes() -> None:
+    """A triangle of half width 10, an exponential cut by its first lag, one that never falls."""
+    lags = np.arange(5.0, 101.0)
+    triangle = -np.maximum(4.0 * (1 - np.abs(lags - 40.0) / 10.0), 0.0)
+    assert half_widths(lags, triangle[None], 35)[0] == pytest.approx(10.0)
+    exponential = -3.0 * np.exp(-lags / 20.0)
+    # The curve is read between lags in a straight line.
+    assert half_widths(lags, exponential[None], 0)[0] == pytest.approx(20 * np.log(2), rel=1e-3)
+    assert half_widths(lags, np.stack([-np.ones(96), np.ones(96)]), 10).tolist() == [95.0, 0.0]
+
+
+def test_half_width_of_the_after_spike_kernel() -> None:
+    """Each draw by its own height at the mean curve's minimum, from the window's end on."""
+    eta = after_spike_kernel("monotone")
+    weights = cell_weights(100.0, 20.0, eta)
+    lags = 0.5 * np.arange(1, 601)
+    first = eta[lags > 5.0][0]
+    expected = lags[(lags > 5.0) & (eta > first / 2)][0] - 5.5
+    found = features(np.stack([weights, 1.5 * weights]))["after_spike_half_width"]
+    np.testing.assert_allclose(found, expected, atol=0.6)
+    weights[DESIGN.columns["after_spike"]] *= -1
+    assert np.isnan(features(weights)["after_spike_half_width"]).all()

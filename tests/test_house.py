@@ -43,7 +43,6 @@ TESTED_IN = {
     "report/truth.py": "report/test_page.py",
     "report/page_cell.py": "report/test_page.py",
     "report/page_figures.py": "report/test_page.py",
-    "report/page_method.py": "report/test_page.py",
     "report/style.py": "report/test_figure_style.py",
     "cli/options.py": "cli/test_fit.py",
     "cli/printing.py": "cli/test_check.py",

@@ -42,6 +42,15 @@ class SweepRows:
         """Measured minus predicted, NaN where a row was not fitted, shape (n_rows,)."""
         return np.where(self.kept, self.voltage - self.prediction, np.nan)
 
+    def centred(self, drift: bool) -> FloatArray:
+        """Residual less its mean over the sweep; with `drift` less its straight line."""
+        residual, kept = self.residual, self.kept
+        time = self.time_ms - self.time_ms[kept].mean()
+        degree = int(drift and np.count_nonzero(kept) > 1)
+        own = np.polynomial.polynomial.polyfit(time[kept], residual[kept], degree)
+        left: FloatArray = residual - np.polynomial.polynomial.polyval(time, own)
+        return left
+
 
 def sweep_rows(
     recordings: Sequence[Recording], design: VoltageDesign, weights: FloatArray
@@ -93,6 +102,7 @@ def linearity(
     design: VoltageDesign,
     weights: FloatArray,
     correlation_ms: float,
+    drift: bool = False,
 ) -> Linearity:
     """Bin the residual by the predicted voltage.
 
@@ -106,13 +116,14 @@ def linearity(
         Posterior mean of the weights, shape (P,).
     correlation_ms
         Correlation time of the residual, ms: rows two of these apart count as independent.
+    drift
+        Whether sweeps were found to drift, so that a line is taken out instead.
     """
     predictions, residuals = [], []
     for rows in sweep_rows(recordings, design, weights):
         if rows.kept.any():
-            residual = rows.residual[rows.kept]
             predictions.append(rows.prediction[rows.kept])
-            residuals.append(residual - residual.mean())
+            residuals.append(rows.centred(drift)[rows.kept])
     prediction, residual = np.concatenate(predictions), np.concatenate(residuals)
     order = np.argsort(prediction, kind="stable")
     bins = [part for part in np.array_split(order, _BINS) if len(part)]
@@ -124,3 +135,90 @@ def linearity(
     chance = (len(bins) - 1) / max(independent, 1.0)
     centres = np.array([prediction[part].mean() for part in bins])
     return Linearity(centres, means, max(0.0, share - chance))
+
+
+#: An excursion beyond so many robust sds is an event: a normal residual lies there in one of
+#: 16 000 independent rows.
+EVENT_SDS = 4.0
+#: Sd of a normal variate over its median absolute deviation.
+_SD_OVER_MAD = 1.4826
+
+
+@dataclass(frozen=True)
+class ResidualMoments:
+    """How the residual is distributed, all rows together.
+
+    Attributes
+    ----------
+    sd, robust_sd
+        Standard deviation, and 1.4826 times the median absolute deviation, mV: the same for a
+        normal residual.
+    median
+        mV.
+    skewness, excess_kurtosis
+        Third and fourth standardised moment, the latter less three; both 0 for a normal residual.
+    above, below
+        Events: stretches of rows on one side of the median, each counted once, that go beyond
+        `EVENT_SDS` robust sds.
+    seconds
+        Time that was looked at, s.
+    """
+
+    sd: float
+    robust_sd: float
+    median: float
+    skewness: float
+    excess_kurtosis: float
+    above: int
+    below: int
+    seconds: float
+
+    @property
+    def limits(self) -> tuple[float, float]:
+        """Residual beyond which an excursion is an event, mV."""
+        reach = EVENT_SDS * self.robust_sd
+        return self.median - reach, self.median + reach
+
+
+def residual_moments(residuals: Sequence[FloatArray], row_ms: float) -> ResidualMoments:
+    """Measure the distribution of the residual and count its large excursions.
+
+    Parameters
+    ----------
+    residuals
+        Residual of each sweep, mV, shape (n_rows,) each, NaN where a row was not fitted.
+    row_ms
+        Length of a row, ms.
+
+    Returns
+    -------
+    ResidualMoments
+        Not a test: rows are correlated, so that moments scatter far more than those of as many
+        independent values.
+    """
+    pooled = np.concatenate(list(residuals))
+    pooled = pooled[np.isfinite(pooled)]
+    sd, median = float(pooled.std()), float(np.median(pooled))
+    robust_sd = _SD_OVER_MAD * float(np.median(np.abs(pooled - median)))
+    standard = (pooled - pooled.mean()) / (sd if sd > 0 else 1.0)
+    reach = EVENT_SDS * robust_sd
+    extremes = np.concatenate([_extremes(values - median) for values in residuals])
+    return ResidualMoments(
+        sd=sd,
+        robust_sd=robust_sd,
+        median=median,
+        skewness=float(np.mean(standard**3)),
+        excess_kurtosis=float(np.mean(standard**4)) - 3.0,
+        above=int(np.count_nonzero(extremes > reach)),
+        below=int(np.count_nonzero(extremes < -reach)),
+        seconds=len(pooled) * row_ms / 1e3,
+    )
+
+
+def _extremes(values: FloatArray) -> FloatArray:
+    """Value farthest from zero of each stretch of one sign; NaN ends a stretch, counted as 0."""
+    filled = np.nan_to_num(values, nan=0.0)
+    sign = np.sign(filled)
+    starts = np.flatnonzero(np.append(True, sign[1:] != sign[:-1]))
+    farthest: FloatArray = sign[starts] * np.maximum.reduceat(np.abs(filled), starts)
+    return farthest

@@ -2,7 +2,8 @@
 
 The membrane follows the model of the methods page, spikes are drawn from the escape rate of the
 noise-free membrane, and the recorded voltage adds correlated noise, synaptic-like events, an
-unbalanced bridge, offsets of sweeps and the shape of the spike itself. Nothing here is data.
+unbalanced bridge, offsets of sweeps and the shape of the spike itself. Two options break the
+model on purpose: noise that triggers spikes, and a membrane that rectifies. Nothing here is data.
 """
 
 from __future__ import annotations
@@ -57,6 +58,12 @@ class Neuron:
         Time after a spike without another.
     noise
         What the current did not cause.
+    noise_triggers
+        Whether the escape rate follows the membrane with its noise, ``exp((u + r − θ0)/Δu)``,
+        instead of the noise-free one.
+    rectification_mV
+        Outward rectification a: the current's deflection x from E becomes ``x/(1 + x/a)`` where
+        it is positive, and never exceeds a; infinite for a linear cell.
     """
 
     input: FloatArray
@@ -67,6 +74,8 @@ class Neuron:
     softness_mV: float = 1.5
     dead_time_ms: float = 2.0
     noise: Noise = field(default_factory=Noise)
+    noise_triggers: bool = False
+    rectification_mV: float = np.inf
 
 
 def exponential_input(resistance_MOhm: float, tau_ms: float, lags_ms: FloatArray) -> FloatArray:
@@ -110,9 +119,13 @@ def simulate(
     sweeps = []
     for number, current in enumerate(currents):
         driven = membrane(neuron, current, step_ms)
-        spikes, after = _spikes(neuron, driven, step_ms, rng)
-        voltage = driven + after + neuron.electrode_MOhm * current
-        voltage += background(neuron.noise, len(current), step_ms, rng)
+        if neuron.noise_triggers:
+            noise = background(neuron.noise, len(current), step_ms, rng)
+            spikes, after = _spikes(neuron, driven + noise, step_ms, rng)
+        else:
+            spikes, after = _spikes(neuron, driven, step_ms, rng)
+            noise = background(neuron.noise, len(current), step_ms, rng)
+        voltage = driven + after + neuron.electrode_MOhm * current + noise
         _add_spike_shapes(voltage, spikes, step_ms)
         sweeps.append(Sweep(number, current, voltage, np.ones(len(current), np.bool_), spikes))
     return Recording(name, step_ms, tuple(sweeps), spikes_from="simulation")
@@ -123,7 +136,10 @@ def membrane(neuron: Neuron, current: FloatArray, step_ms: float) -> FloatArray:
     n_lags = len(neuron.input)
     past = np.concatenate([np.full(n_lags, current[0]), current[:-1]])
     convolved = fftconvolve(past, neuron.input)[n_lags - 1 : n_lags - 1 + len(current)]
-    driven: FloatArray = neuron.offset_mV + convolved * step_ms
+    deflection = convolved * step_ms
+    # Dividing by one plus a share of the positive part leaves hyperpolarisation as it is.
+    rectified = deflection / (1 + np.maximum(deflection, 0.0) / neuron.rectification_mV)
+    driven: FloatArray = neuron.offset_mV + rectified
     return driven
 
 

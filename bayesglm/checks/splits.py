@@ -37,7 +37,7 @@ class PartEstimate:
     units
         Indices of its units in the digest.
     mean, covariance
-        Of the weights, shapes (P,) and (P, P), given the whole recording's kernel sds.
+        Of the weights, shapes (P,) and (P, P).
     """
 
     units: IntArray
@@ -111,7 +111,7 @@ def estimate_part(
     prior: WeightPrior,
     sd: FloatArray,
 ) -> PartEstimate:
-    """Fit a part of the units, with what the whole recording says of smoothness and offsets.
+    """Fit a part of the units, with what the whole recording says of offsets and drifts.
 
     Parameters
     ----------
@@ -120,7 +120,7 @@ def estimate_part(
     units
         Indices of the units of the part.
     whole
-        Calibration of the whole digest; its sweep offsets are taken over.
+        Calibration of the whole digest; its sweeps' effects are taken over.
     inflation
         D of each kernel, from the spread of units inside the parts.
     prior
@@ -133,7 +133,7 @@ def estimate_part(
     PartEstimate
     """
     part = digest.take(units)
-    fit = least_squares(part, prior.root, whole.fit.offset_ratio, whole.fit.offset_variance)
+    fit = least_squares(part, prior.root, whole.fit.sweep_ratios, whole.fit.sweep_variances)
     calibration = calibrate(part, fit, np.empty((0, digest.design.n_weights)), inflation)
     evidence = voltage_evidence(fit.weights, calibration.precision, fit.rank, whole.freedom, prior)
     return PartEstimate(units, *weight_moments(evidence, prior, sd))

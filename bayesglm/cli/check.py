@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING, Any
+
 import typer
 
 from bayesglm.cli.options import (
@@ -16,6 +18,11 @@ from bayesglm.cli.options import (
     print_json,
 )
 
+if TYPE_CHECKING:
+    from bayesglm.recording.settings import Settings
+    from bayesglm.recording.study import CellEntry
+    from bayesglm.verdict import Reason
+
 
 def check(
     inputs: Inputs,
@@ -28,35 +35,58 @@ def check(
 ) -> None:
     """Say what is on the trace and whether it can be fitted; exit 3 if not."""
     from bayesglm.cli.printing import print_reasons
-    from bayesglm.recording.loading import load_recording
-    from bayesglm.recording.quality import check_recording
-    from bayesglm.recording.selection import select as select_part
-    from bayesglm.verdict import worst
 
     study = load_study(inputs, assign, select, cell, seed)
-    found = []
-    for entry in study.cells:
-        for one in entry.recordings:
-            if one.exclude:
-                continue
-            recording = load_recording(one, study.settings)
-            recording = select_part(recording, study.settings.recording.select)
-            found.append((entry, recording, check_recording(recording, study.settings)))
+    found = [
+        (entry, file, rows)
+        for entry in study.cells
+        for file, rows in _check_cell(entry, study.settings)
+    ]
     if as_json:
-        print_json(
-            [
-                {
-                    "cell": entry.name,
-                    "condition": entry.condition,
-                    "file": recording.source,
-                    "verdict": worst(row.verdict for row in rows),
-                    "rows": [row.as_dict() for row in rows],
-                }
-                for entry, recording, rows in found
-            ]
-        )
+        print_json([_as_dict(entry, file, rows) for entry, file, rows in found])
     elif not quiet:
-        for _, recording, rows in found:
-            print_reasons(recording.source, rows)
+        for entry, file, rows in found:
+            print_reasons(file or f"{entry.name}: its fitted recordings together", rows)
     if any(row.verdict == "failed" for _, _, rows in found for row in rows):
         raise typer.Exit(3)
+
+
+def _check_cell(
+    entry: CellEntry, settings: Settings
+) -> list[tuple[str | None, tuple[Reason, ...]]]:
+    """Rows of each file of a cell, and of those that are fitted together without a file's name."""
+    from bayesglm.checks.identification import design_rows
+    from bayesglm.recording.loading import load_recording
+    from bayesglm.recording.quality import check_recording
+    from bayesglm.recording.selection import select
+
+    found: list[tuple[str | None, tuple[Reason, ...]]] = []
+    fitted, places = [], []
+    for one in entry.recordings:
+        if one.exclude:
+            continue
+        recording = select(load_recording(one, settings), settings.recording.select)
+        if one.role == "fit":
+            fitted.append(recording)
+            places.append(len(found))
+        found.append((recording.source, check_recording(recording, settings)))
+    if not fitted:
+        return found
+    design = design_rows(fitted, settings)
+    if len(fitted) > 1:
+        return [*found, (None, design)]
+    file, rows = found[places[0]]
+    found[places[0]] = (file, (*rows, *design))
+    return found
+
+
+def _as_dict(entry: CellEntry, file: str | None, rows: tuple[Reason, ...]) -> dict[str, Any]:
+    from bayesglm.verdict import worst
+
+    return {
+        "cell": entry.name,
+        "condition": entry.condition,
+        "file": file,
+        "verdict": worst(row.verdict for row in rows),
+        "rows": [row.as_dict() for row in rows],
+    }

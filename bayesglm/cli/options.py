@@ -20,7 +20,7 @@ Inputs = Annotated[
     list[Path],
     typer.Argument(
         metavar="STUDY|RECORDING…",
-        help="A study.toml or its folder, or recordings (CSV or CSV.gz), each one cell.",
+        help="A study.toml or its folder, or recordings (CSV, CSV.gz or NPZ), each one cell.",
     ),
 ]
 AsJson = Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")]

@@ -85,8 +85,12 @@ def print_demo(result: DemoResult) -> None:
 
 
 def _mark(row: Reason) -> Text:
-    # What was not measured did not pass.
-    return Text("–") if row.value.startswith("not measured") else _severity(row.verdict)
+    # What was not measured or judged did not pass.
+    return (
+        Text("–")
+        if row.value.startswith(("not measured", "not judged"))
+        else _severity(row.verdict)
+    )
 
 
 def _severity(severity: Severity) -> Text:

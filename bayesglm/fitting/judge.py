@@ -42,12 +42,14 @@ def judge(
     commands = _commands(recordings, digest, summary, settings)
     sampler = diagnose.summarise_sampler(posterior.chains, posterior.weights)
     correlation_ms = correlation_time_ms(digest, calibration.fit)
-    bent = linearity(recordings, posterior.design, posterior.flat.mean(axis=0), correlation_ms)
+    drifts = bool(np.any(calibration.fit.sweep_variances[1:] > 0))
+    mean = posterior.flat.mean(axis=0)
+    bent = linearity(recordings, posterior.design, mean, correlation_ms, drifts)
     known = {name: np.isfinite(summary.kernels[name].mean) for name in posterior.design.kernels}
     reasons = [
         *diagnose.sampler_reasons(sampler, commands),
         *diagnose.unit_reasons(
-            digest.n_units, calibration.freedom, calibration.leverage, digest.labels, commands
+            calibration.units, calibration.freedom, calibration.leverage, digest.labels, commands
         ),
         *diagnose.ratio_reasons(calibration.ratio, commands),
         *diagnose.half_reasons(summary.halves, commands),
@@ -63,7 +65,8 @@ def judge(
         verdict=worst(reason.verdict for reason in reasons),
         reasons=tuple(reasons),
         observe=settings.model.observe,
-        units=digest.n_units,
+        units=calibration.units.clusters,
+        effective_units=calibration.units.effective,
         calibration_ratio=calibration.ratio,
         route="least squares, calibrated" if settings.model.noise == "calibrated" else "white",
         rhat_max=sampler.rhat_max,
@@ -146,5 +149,6 @@ def _one_drive(
         return ""
     if digest.n_units != len(recordings[0].sweeps):
         return ""
-    numbers = [recordings[0].sweeps[digest.sweep[unit]].number for unit in split.ranges[-1].units]
+    sweeps = [recordings[0].sweeps[digest.sweep[unit]] for unit in split.ranges[-1].units]
+    numbers = [number for sweep in sweeps for number in sweep.numbers]
     return fit_command(recordings, f"sweeps={format_sweeps(numbers)}", settings)

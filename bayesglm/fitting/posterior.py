@@ -8,6 +8,7 @@ import jax
 import numpy as np
 
 from bayesglm.inference.sample import Chains, nuts
+from bayesglm.inference.slices import coordinate_slices
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.calibration import Calibration
 from bayesglm.models.cell import (
@@ -32,11 +33,11 @@ class Posterior:
     Attributes
     ----------
     design, prior
-        The linear model and the prior of its weights.
+        The linear model and the prior of its weights, at the posterior medians of time constants.
     step_ms
         Recorded step, ms; the finest where recordings differ.
     chains
-        Draws of the kernels' sds and φ.
+        Draws of the kernels' sds, φ and time constants.
     weights
         Exact draws of the weights, shape (chains, draws, P).
     """
@@ -55,7 +56,8 @@ class Posterior:
     @property
     def kernel_sd(self) -> FloatArray:
         """Posterior median of each kernel's sd, shape (n_kernels,)."""
-        median: FloatArray = np.median(self.chains.draws["sd"], axis=(0, 1))
+        sd = self.chains.draws["sd"]
+        median: FloatArray = np.median(sd.reshape(sd.shape[0] * sd.shape[1], -1), axis=0)
         return median
 
 
@@ -66,14 +68,22 @@ def sample_posterior(
     step_ms: float,
     settings: Settings,
 ) -> Posterior:
-    """Sample the kernels' sds and φ with NUTS, then draw the weights exactly."""
+    """Sample the kernels' sds, φ and time constants, then draw the weights exactly.
+
+    With NUTS, or slice by slice where there are time constants.
+    """
     evidence = _evidence(calibration, prior, white=settings.model.noise == "white")
     sample_key, draw_key = jax.random.split(jax.random.key(settings.sampling.seed))
-    chains = nuts(voltage_model, evidence, settings.sampling, sample_key)
+    sampler = coordinate_slices if prior.exponentials else nuts
+    chains = sampler(voltage_model, evidence, settings.sampling, sample_key)
     sd, phi = chains.draws["sd"], chains.draws["phi"]
-    x = draw_weights(evidence, sd.reshape(-1, sd.shape[-1]), phi.reshape(-1), draw_key)
+    tau = {
+        name: draws.reshape(-1, draws.shape[-1]) for name, draws in chains.time_constants.items()
+    }
+    x = draw_weights(evidence, sd.reshape(phi.size, -1), phi.reshape(-1), draw_key, tau)
     weights = prior.mean + x @ prior.root.T
-    return Posterior(design, prior, step_ms, chains, weights.reshape(*phi.shape, -1))
+    typical = prior.at({name: np.median(draws, axis=0) for name, draws in tau.items()})
+    return Posterior(design, typical, step_ms, chains, weights.reshape(*phi.shape, -1))
 
 
 def white_weights(

@@ -12,6 +12,7 @@ from threadpoolctl import threadpool_limits
 from bayesglm.features import reported_rows
 from bayesglm.fitting.judge import judge
 from bayesglm.fitting.posterior import sample_posterior
+from bayesglm.fitting.sensitivity import find_sensitivity, sensitivity_reasons
 from bayesglm.fitting.summary import summarise
 from bayesglm.inference.results import CellFit
 from bayesglm.inference.setup import make_digest, resolve_design, settle
@@ -101,6 +102,9 @@ def fit(
         with clock.stage("summarise"):
             summary = summarise(posterior, digest, calibration, settings)
             verdict = judge(posterior, digest, calibration, summary, recordings, settings)
+        with clock.stage("sensitivity"):
+            sensitivity = find_sensitivity(recordings, posterior, calibration, settings)
+            reasons = sensitivity_reasons(sensitivity, recordings, settings)
     return CellFit(
         cell=entry.name,
         condition=entry.condition,
@@ -117,8 +121,9 @@ def fit(
         kernels=summary.kernels,
         features=summary.features,
         splits=summary.splits,
-        verdict=replace(verdict, seconds=clock.seconds),
+        verdict=replace(verdict.with_reasons(reasons), seconds=clock.seconds),
         warnings=_warnings(design, settings),
+        sensitivity=sensitivity,
     )
 
 

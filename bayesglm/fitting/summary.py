@@ -6,6 +6,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from arviz_stats.base import array_stats
+from scipy.stats import norm
 
 from bayesglm.checks.splits import (
     PartEstimate,
@@ -65,7 +66,9 @@ def summarise(
 
     def parts_of(groups: tuple[IntArray, ...]) -> list[PartEstimate]:
         inflation = inflation_within(digest, calibration, groups)
-        prior, sd = posterior.prior, posterior.kernel_sd
+        # At the prior's own scales: the whole recording's sds, which are smaller, pulled parts
+        # towards smoother kernels than they have.
+        prior, sd = posterior.prior, posterior.prior.sd_scale
         return [estimate_part(digest, units, calibration, inflation, prior, sd) for units in groups]
 
     def read_features(part: PartEstimate) -> dict[str, FeatureDraws]:
@@ -98,9 +101,7 @@ def summarise(
 
 def _bands(posterior: Posterior, calibration: Calibration, level: float) -> dict[str, Band]:
     white = WeightSummary(*white_weights(calibration, posterior.prior, posterior.kernel_sd))
-    # The second moment of a half-normal is its scale squared, so this is the prior covariance
-    # with the kernels' sds integrated out.
-    prior_covariance = posterior.prior.root @ posterior.prior.root.T
+    prior_covariance = posterior.prior.covariance(posterior.prior.sd_scale)
     names = list(posterior.design.kernels)
     if "electrode" in posterior.design.columns:
         names.append("electrode")
@@ -150,11 +151,12 @@ def _with_ranges(band: Band, ranges: list[DriveRange]) -> Band:
     if not ranges:
         return band
     means, sds = (np.array(values) for values in zip(*(r.curve for r in ranges), strict=True))
+    reach = float(norm.ppf((1 + band.level) / 2))
     return replace(
         band,
         between_range_sd=between_sd(means, sds),
-        protocol_lower=np.minimum(band.lower, means.min(axis=0)),
-        protocol_upper=np.maximum(band.upper, means.max(axis=0)),
+        protocol_lower=np.minimum(band.lower, (means - reach * sds).min(axis=0)),
+        protocol_upper=np.maximum(band.upper, (means + reach * sds).max(axis=0)),
     )
 
 
@@ -185,7 +187,9 @@ def _feature(
         means = np.array([r.features[name][0] for r in ranges])
         sds = np.array([r.features[name][1] for r in ranges])
         between = float(between_sd(means, sds))
-        low, high = float(np.fmin(lower, means.min())), float(np.fmax(upper, means.max()))
+        reach = float(norm.ppf((1 + level) / 2))
+        low = float(np.fmin(lower, (means - reach * sds).min()))
+        high = float(np.fmax(upper, (means + reach * sds).max()))
     return Feature(
         name=name,
         unit=drawn.unit,

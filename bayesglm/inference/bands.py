@@ -7,15 +7,12 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.stats import norm
 
+from bayesglm.inference.results import SIMULTANEOUS_SD_SHARE as SIMULTANEOUS_SD_SHARE
 from bayesglm.inference.results import Band
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.recording.recording import BoolArray, FloatArray
 
 KERNEL_UNITS = {"input": "MΩ/ms", "after_spike": "mV", "electrode": "MΩ"}
-
-#: A simultaneous band leaves out lags where the sd is below this share of its maximum: there
-#: the kernel is pinned to zero by construction.
-SIMULTANEOUS_SD_SHARE = 0.02
 
 #: Lags are written every row up to here, ms, and every 1 ms after.
 _FINE_LAGS_MS = 20.0
@@ -32,10 +29,12 @@ class WeightSummary:
 def kernel_lags(design: VoltageDesign, kernel: str) -> FloatArray:
     """Lags at which a kernel is written, ms: every row to 20 ms, then every 1 ms.
 
-    The electrode term has the one lag 0.
+    The electrode term has the lag 0, and those in the middle of its kernel's bins.
     """
     if kernel == "electrode":
-        return np.zeros(1)
+        bins = design.electrode_kernel
+        edges = np.zeros(1) if bins is None else bins.edges_ms
+        return np.append(0.0, (edges[1:] + edges[:-1]) / 2)
     duration = design.kernels[kernel].duration_ms
     fine = np.arange(1, round(_FINE_LAGS_MS / design.row_ms) + 1) * design.row_ms
     coarse = np.arange(_FINE_LAGS_MS + 1.0, duration + 1e-9)
@@ -47,7 +46,11 @@ def kernel_rows(design: VoltageDesign, kernel: str, lags_ms: FloatArray) -> Floa
     """Matrix that maps all weights to a kernel at given lags, shape (n_lags, P)."""
     rows = np.zeros((len(lags_ms), design.n_weights))
     place = design.columns[kernel]
-    rows[:, place] = 1.0 if kernel == "electrode" else design.kernels[kernel].evaluate(lags_ms)
+    if kernel == "electrode":
+        # Each lag is a weight of its own, in MΩ.
+        rows[:, place] = np.eye(place.stop - place.start)
+    else:
+        rows[:, place] = design.kernels[kernel].evaluate(lags_ms)
     return rows
 
 

@@ -27,8 +27,9 @@ def to_datatree(fit: CellFit) -> xr.DataTree:
     Returns
     -------
     xarray.DataTree
-        Groups ``posterior`` (``sd_input`` …, ``phi``, ``offset``, ``electrode``, and the weights
-        of each kernel), ``sample_stats`` and ``constant_data`` (lags and splines of each kernel:
+        Groups ``posterior`` (``sd_input`` …, or ``tau_input`` … in ms for a kernel of
+        exponentials, ``phi``, ``offset``, ``electrode``, and the weights of each kernel),
+        ``sample_stats`` and ``constant_data`` (lags and basis of each kernel:
         ``posterior.input_weights @ constant_data.input_splines`` is κ at ``input_lag`` in ms).
     """
     draws: dict[str, tuple[tuple[str, ...], FloatArray]] = {
@@ -38,8 +39,14 @@ def to_datatree(fit: CellFit) -> xr.DataTree:
     coords: dict[str, FloatArray] = {}
     for k, name in enumerate(fit.prior.names):
         draws[f"sd_{name}"] = (("chain", "draw"), fit.chains.draws["sd"][..., k])
+    for name, tau in fit.chains.time_constants.items():
+        draws[f"tau_{name}"] = (("chain", "draw", f"{name}_term"), tau)
     for name, place in fit.design.columns.items():
         values = fit.weights[..., place]
+        if name == "electrode" and fit.design.electrode_kernel is not None:
+            draws[name] = (("chain", "draw", "electrode_lag"), values)
+            coords["electrode_lag"] = kernel_lags(fit.design, name)
+            continue
         if name not in fit.design.kernels:
             draws[name] = (("chain", "draw"), values[..., 0])
             continue

@@ -13,6 +13,7 @@ import numpy as np
 from arviz_stats.base import array_stats
 
 from bayesglm.inference.sample import Chains
+from bayesglm.likelihood.jackknife import UnitCount
 from bayesglm.recording.recording import FloatArray
 from bayesglm.verdict import Reason, Severity
 
@@ -83,7 +84,7 @@ class SamplerSummary:
 
 
 def summarise_sampler(chains: Chains, weights: FloatArray) -> SamplerSummary:
-    """Summarise convergence over the kernels' sds, φ and all weights.
+    """Summarise convergence over the kernels' sds, φ, time constants and all weights.
 
     Parameters
     ----------
@@ -92,7 +93,15 @@ def summarise_sampler(chains: Chains, weights: FloatArray) -> SamplerSummary:
     weights
         Exact draws of the weights, shape (chains, draws, P).
     """
-    sampled = np.concatenate([chains.draws["sd"], chains.draws["phi"][..., None], weights], axis=-1)
+    sampled = np.concatenate(
+        [
+            chains.draws["sd"],
+            chains.draws["phi"][..., None],
+            *(np.log(tau) for tau in chains.time_constants.values()),
+            weights,
+        ],
+        axis=-1,
+    )
     axes = {"chain_axis": 0, "draw_axis": 1}
     rhat = array_stats.rhat(sampled, **axes)
     bulk = array_stats.ess(sampled, **axes)
@@ -148,19 +157,25 @@ def sampler_reasons(summary: SamplerSummary, commands: Commands) -> list[Reason]
 
 
 def unit_reasons(
-    n_units: int, freedom: float, leverage: FloatArray, labels: tuple[str, ...], commands: Commands
+    units: UnitCount,
+    freedom: float,
+    leverage: FloatArray,
+    labels: tuple[str, ...],
+    commands: Commands,
 ) -> list[Reason]:
-    """Rows on the independent units."""
+    """Rows on the independent units; `leverage` and `labels` are those of each unit."""
+    few = units.clusters < _UNITS_LIMIT
     heaviest = int(np.argmax(leverage))
     return [
         Reason(
             "units",
-            f"{n_units} independent units, {freedom:.1f} degrees of freedom",
+            _units_in_words(units, freedom, len(labels)),
             f"≥ {_UNITS_LIMIT}",
-            _grade(n_units >= _UNITS_LIMIT, n_units < _UNITS_FAILED),
+            _grade(not few, units.clusters < _UNITS_FAILED),
             *_when(
-                n_units < _UNITS_LIMIT,
-                "the error bars rest on the spread between units; record more sweeps",
+                few,
+                "the error bars rest on the spread between units; record more sweeps"
+                + (" with other currents" if units.repeated else ""),
                 commands.check,
             ),
         ),
@@ -176,6 +191,23 @@ def unit_reasons(
             ),
         ),
     ]
+
+
+def _units_in_words(units: UnitCount, freedom: float, n_units: int) -> str:
+    """Say on how many units the error bars rest, and how they were counted."""
+    worth = f"worth {units.effective:.1f} equal ones"
+    if units.repeated:
+        said = (
+            f"{n_units} units of {units.clusters} different currents, {worth}: clustered by "
+            "current and by sweep"
+        )
+    else:
+        said = f"{units.clusters} independent units, {worth}"
+    if units.neighbours:
+        said += "; short blocks are joined to their neighbours"
+    if units.floored:
+        said += f"; {units.floored} negative variances are set to zero"
+    return f"{said}; {freedom:.1f} degrees of freedom"
 
 
 def ratio_reasons(ratio: dict[str, float], commands: Commands) -> list[Reason]:

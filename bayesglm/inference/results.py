@@ -5,22 +5,28 @@ No estimate travels without its interval, and no interval without the verdict on
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from bayesglm.inference.sample import Chains
+from bayesglm.inference.sensitivity import Sensitivity
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.calibration import Calibration
 from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.models.priors import WeightPrior
 from bayesglm.recording.recording import FloatArray, IntArray, Recording
 from bayesglm.recording.settings import Settings
-from bayesglm.verdict import Reason, Severity
+from bayesglm.verdict import Reason, Severity, worst
 
 if TYPE_CHECKING:
     import xarray
+
+#: A simultaneous band leaves out lags where the sd is below this share of its maximum: there
+#: the kernel is pinned to zero by construction.
+SIMULTANEOUS_SD_SHARE = 0.02
 
 
 @dataclass(frozen=True, eq=False)
@@ -50,7 +56,7 @@ class Band:
         How much the kernel differs between ranges of drive beyond error; NaN where it cannot be
         told.
     protocol_lower, protocol_upper
-        Hull of the pointwise band and the estimates of the three ranges of drive.
+        Hull of the pointwise band and the bands of the three ranges of drive.
     prior_share
         Posterior sd over prior sd.
     """
@@ -71,6 +77,18 @@ class Band:
     protocol_lower: FloatArray
     protocol_upper: FloatArray
     prior_share: FloatArray
+
+    @property
+    def simultaneous_range_ms(self) -> tuple[float, float]:
+        """First and last lag over which the simultaneous band holds the whole curve, ms.
+
+        Lags where the sd is too small beside its maximum are pinned to zero by construction.
+        NaN where nothing is known.
+        """
+        known = np.flatnonzero(self.sd > SIMULTANEOUS_SD_SHARE * np.nanmax(self.sd, initial=0.0))
+        if not len(known):
+            return float("nan"), float("nan")
+        return float(self.lags_ms[known[0]]), float(self.lags_ms[known[-1]])
 
 
 @dataclass(frozen=True)
@@ -156,12 +174,16 @@ class Verdict:
         The worst of the reasons.
     reasons
         Every check, also those passed.
+    units, effective_units
+        Independent units (different currents, where a current is repeated), and how many equal
+        ones they are worth.
     """
 
     verdict: Severity
     reasons: tuple[Reason, ...]
     observe: str
     units: int
+    effective_units: float
     calibration_ratio: dict[str, float]
     route: str
     rhat_max: float
@@ -172,6 +194,11 @@ class Verdict:
     seconds: dict[str, float] = field(default_factory=dict)
     khat: float | None = None
     effective_draws: float | None = None
+
+    def with_reasons(self, reasons: Sequence[Reason]) -> Verdict:
+        """The verdict with further reasons."""
+        every = (*self.reasons, *reasons)
+        return replace(self, reasons=every, verdict=worst(reason.verdict for reason in every))
 
     @property
     def open_reasons(self) -> tuple[Reason, ...]:
@@ -210,6 +237,8 @@ class CellFit:
         Whether to believe it.
     warnings
         Notes for the user in words, such as "no spikes: the after-spike kernel is left out".
+    sensitivity
+        The same cell with other durations, and with other ends of the spike window.
     """
 
     cell: str
@@ -229,6 +258,7 @@ class CellFit:
     splits: dict[str, Split]
     verdict: Verdict
     warnings: tuple[str, ...] = ()
+    sensitivity: Sensitivity = field(default_factory=Sensitivity)
 
     @property
     def name(self) -> str:

@@ -19,6 +19,7 @@ from numpyro.infer.initialization import init_to_median
 from numpyro.infer.util import initialize_model
 
 from bayesglm import backend as backend
+from bayesglm.models.cell import TAU_SITE
 from bayesglm.recording.recording import BoolArray, FloatArray, IntArray
 from bayesglm.recording.settings import SamplingSection
 
@@ -46,6 +47,15 @@ class Chains:
     energy: FloatArray
     accept_prob: FloatArray
     n_steps: IntArray
+
+    @property
+    def time_constants(self) -> dict[str, FloatArray]:
+        """Draws of time constants by kernel of exponentials, ms, shape (chains, draws, terms)."""
+        return {
+            name.removeprefix(TAU_SITE): draws
+            for name, draws in self.draws.items()
+            if name.startswith(TAU_SITE)
+        }
 
 
 def nuts(

@@ -5,17 +5,24 @@ from the data.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 
-from bayesglm.kernels.basis import KernelSpec
-from bayesglm.kernels.design import VoltageDesign, default_row_ms, samples_per_row
+from bayesglm.kernels.basis import DEFAULT_WEIGHTS, KernelSpec
+from bayesglm.kernels.design import (
+    VoltageDesign,
+    default_row_ms,
+    electrode_spec,
+    samples_per_row,
+)
 from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.jackknife import INDEPENDENT_TIMES
 from bayesglm.likelihood.least_squares import (
     LeastSquares,
     correlation_time_ms,
     least_squares,
-    with_sweep_offsets,
+    with_sweep_effects,
 )
 from bayesglm.likelihood.voltage import refuse_long_kernels, voltage_digest
 from bayesglm.models.cell import voltage_evidence, weight_moments
@@ -36,8 +43,11 @@ _SWEEP_SHARE = 0.5
 
 #: Blocks are at least this long, ms, this many correlation times, and at most this many.
 _BLOCK_MS = 1000.0
-_CORRELATION_TIMES = 20.0
 _MOST_BLOCKS = 200
+#: Rather than fewer blocks than this, blocks as short as so many correlation times are taken,
+#: whose neighbours the calibration then joins.
+_FEWEST_BLOCKS = 12
+_FEWEST_TIMES = 5.0
 
 #: Current stands still where its sd over this many ms is below this share of its spread.
 _STILL_MS = 20.0
@@ -77,6 +87,15 @@ def refuse_unusable(entry: CellEntry, settings: Settings) -> bool:
     return True
 
 
+def room_ms(recordings: Sequence[Recording]) -> float:
+    """How long a kernel may be by default, ms: half the longest sweep."""
+    return _SWEEP_SHARE * max(
+        sweep.n_samples * recording.step_ms
+        for recording in recordings
+        for sweep in recording.sweeps
+    )
+
+
 def resolve_design(recordings: Sequence[Recording], settings: Settings) -> VoltageDesign:
     """Fill in row length and durations.
 
@@ -93,24 +112,25 @@ def resolve_design(recordings: Sequence[Recording], settings: Settings) -> Volta
     VoltageDesign
 
     """
-    longest = max(
-        sweep.n_samples * recording.step_ms
-        for recording in recordings
-        for sweep in recording.sweeps
-    )
-    room = _SWEEP_SHARE * longest
+    room = room_ms(recordings)
     sections = settings.kernels
     after_ms = sections.after_spike.duration_ms or min(_AFTER_SPIKE_MS, room)
     spikes = sum(recording.n_spikes for recording in recordings)
     longest_input = min(_INPUT_BOUNDS_MS[1], room)
 
+    row_ms = common_row_ms(recordings, settings)
+    electrode_ms = sections.electrode.duration_ms
+    step_ms = max(recording.step_ms for recording in recordings)
+
     def design(input_ms: float) -> VoltageDesign:
         return VoltageDesign(
-            input=_spec(sections.input, input_ms),
-            after_spike=_spec(sections.after_spike, after_ms) if spikes else None,
+            input=_spec(sections.input, input_ms, row_ms),
+            after_spike=_spec(sections.after_spike, after_ms, row_ms) if spikes else None,
             electrode=sections.electrode.include,
-            row_ms=common_row_ms(recordings, settings),
+            electrode_kernel=electrode_spec(electrode_ms, step_ms) if electrode_ms else None,
+            row_ms=row_ms,
             spike_window_ms=settings.model.spike_window_ms,
+            drift=settings.model.sweep_offsets and settings.model.sweep_drift,
         )
 
     if sections.input.duration_ms is not None:
@@ -118,7 +138,7 @@ def resolve_design(recordings: Sequence[Recording], settings: Settings) -> Volta
     tau = _time_constant_from_steps(recordings)
     if tau is None:
         settled = settle(recordings, longest_input, settings)
-        tau = _time_constant_from_fit(settled, design(longest_input), settings)
+        tau = _time_constant_from_fit(settled, _of_splines(design(longest_input)), settings)
     lower = min(_INPUT_BOUNDS_MS[0], room)
     return design(float(np.round(np.clip(_TIME_CONSTANTS * tau, lower, longest_input))))
 
@@ -132,13 +152,26 @@ def settle(
     return tuple(leave_out_unsettled(recording, duration_ms) for recording in recordings)
 
 
+def nominal_unit_ms(recordings: Sequence[Recording], settings: Settings) -> float | None:
+    """Length of a unit before the residual's correlation is known, ms; None for whole sweeps."""
+    units, asked_ms = settings.model.units, settings.model.block_ms
+    if units == "auto":
+        stepped = all(_mostly_constant(recording) for recording in recordings)
+        units = "sweep" if stepped and asked_ms is None else "block"
+    if units == "sweep":
+        return None
+    total_ms = sum(recording.seconds for recording in recordings) * 1e3
+    return asked_ms or max(_BLOCK_MS, total_ms / _MOST_BLOCKS)
+
+
 def make_digest(
     recordings: Sequence[Recording], design: VoltageDesign, prior: WeightPrior, settings: Settings
 ) -> tuple[VoltageDigest, LeastSquares]:
     """Reduce the recordings to units that are independent, and fit them.
 
     Sweeps are the units of step protocols, since a step takes up a sweep. Otherwise sweeps are
-    cut into blocks of at least 1 s and 20 correlation times of the residual.
+    cut into blocks of at least 1 s and 20 correlation times of the residual; of 5 where there
+    would be fewer than 12 blocks.
 
     Parameters
     ----------
@@ -155,20 +188,15 @@ def make_digest(
     -------
     (digest, fit)
     """
-    units, asked_ms = settings.model.units, settings.model.block_ms
-    if units == "auto":
-        stepped = all(_mostly_constant(recording) for recording in recordings)
-        units = "sweep" if stepped and asked_ms is None else "block"
-    if units == "sweep":
-        digest = voltage_digest(recordings, design, None)
-        return digest, fit_digest(digest, prior.root, settings)
-    total_ms = sum(recording.seconds for recording in recordings) * 1e3
-    block_ms = asked_ms or max(_BLOCK_MS, total_ms / _MOST_BLOCKS)
+    block_ms = nominal_unit_ms(recordings, settings)
     digest = voltage_digest(recordings, design, block_ms)
     fit = fit_digest(digest, prior.root, settings)
-    if asked_ms is None:
-        needed = _CORRELATION_TIMES * correlation_time_ms(digest, fit)
-        factor = int(np.ceil(needed / block_ms))
+    if block_ms is not None and settings.model.block_ms is None:
+        tau_ms = correlation_time_ms(digest, fit)
+        factor = int(np.ceil(INDEPENDENT_TIMES * tau_ms / block_ms))
+        if digest.n_units / factor < _FEWEST_BLOCKS:
+            shortest = int(np.ceil(_FEWEST_TIMES * tau_ms / block_ms))
+            factor = min(factor, max(shortest, digest.n_units // _FEWEST_BLOCKS, 1))
         if factor > 1:
             digest = digest.merge(factor)
             fit = fit_digest(digest, prior.root, settings)
@@ -176,9 +204,9 @@ def make_digest(
 
 
 def fit_digest(digest: VoltageDigest, scale: FloatArray, settings: Settings) -> LeastSquares:
-    """Least squares, with sweep offsets where the settings want them."""
+    """Least squares, with offsets (and drifts) of sweeps where the settings want them."""
     if settings.model.sweep_offsets:
-        return with_sweep_offsets(digest, scale)
+        return with_sweep_effects(digest, scale)
     return least_squares(digest, scale)
 
 
@@ -193,8 +221,22 @@ def _mostly_constant(recording: Recording) -> bool:
     return bool(np.mean(np.concatenate(pieces) < _STILL_SHARE * spread) > 0.5)
 
 
-def _spec(section: KernelSection, duration_ms: float) -> KernelSpec:
-    return KernelSpec(duration_ms, section.weights, section.warp_ms)
+def _spec(section: KernelSection, duration_ms: float, row_ms: float) -> KernelSpec:
+    weights = section.weights or DEFAULT_WEIGHTS[section.basis]
+    if section.basis == "lags":
+        # No more bins than rows of lag.
+        weights = min(weights, max(1, int(duration_ms / row_ms + 1e-9)))
+    return KernelSpec(duration_ms, weights, section.warp_ms, section.basis, row_ms, section.terms)
+
+
+def _of_splines(design: VoltageDesign) -> VoltageDesign:
+    """The design of a first fit: splines where time constants would have to be sampled."""
+
+    def plain(spec: KernelSpec) -> KernelSpec:
+        return replace(spec, basis="splines") if spec.basis == "exponentials" else spec
+
+    after_spike = None if design.after_spike is None else plain(design.after_spike)
+    return replace(design, input=plain(design.input), after_spike=after_spike)
 
 
 def _time_constant_from_steps(recordings: Sequence[Recording]) -> float | None:
@@ -224,6 +266,5 @@ def _time_constant_from_fit(
 def _tempered(digest: VoltageDigest, fit: LeastSquares) -> FloatArray:
     """Precision of the weights as if rows a correlation time apart were independent."""
     rows_apart = max(1.0, 2 * correlation_time_ms(digest, fit) / digest.design.row_ms)
-    back = np.linalg.pinv(fit.basis)
-    precision: FloatArray = back.T @ back / max(fit.residual_variance * rows_apart, 1e-12)
+    precision: FloatArray = fit.back.T @ fit.back / max(fit.residual_variance * rows_apart, 1e-12)
     return precision

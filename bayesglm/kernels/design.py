@@ -21,6 +21,8 @@ from bayesglm.errors import InputError
 from bayesglm.kernels.basis import KernelSpec
 from bayesglm.recording.recording import FloatArray
 
+_MOST_ELECTRODE_BINS = 4
+
 
 @dataclass(frozen=True, eq=False)
 class RowFilter:
@@ -168,6 +170,11 @@ class VoltageDesign:
         Length of a row, ms.
     spike_window_ms
         Rows that touch this window around a spike are left out, ms.
+    drift
+        Whether each sweep drifts linearly on top of its offset.
+    electrode_kernel
+        Further terms of the electrode: the mean current over bins of lags, see `electrode_spec`.
+        None for the current of the same bin alone.
     """
 
     input: KernelSpec
@@ -175,6 +182,13 @@ class VoltageDesign:
     electrode: bool = True
     row_ms: float = 0.5
     spike_window_ms: tuple[float, float] = (-1.0, 5.0)
+    drift: bool = False
+    electrode_kernel: KernelSpec | None = None
+
+    @property
+    def n_sweep_effects(self) -> int:
+        """Number of effects that each sweep has of its own: its offset, and its drift."""
+        return 2 if self.drift else 1
 
     @property
     def columns(self) -> dict[str, slice]:
@@ -182,6 +196,8 @@ class VoltageDesign:
         widths = {"offset": 1}
         if self.electrode:
             widths["electrode"] = 1
+            if self.electrode_kernel is not None:
+                widths["electrode"] += self.electrode_kernel.weights
         widths["input"] = self.input.weights
         if self.after_spike is not None:
             widths["after_spike"] = self.after_spike.weights
@@ -207,6 +223,32 @@ class VoltageDesign:
     def samples_per_row(self, step_ms: float) -> int:
         """Samples averaged into a row; see `samples_per_row`."""
         return samples_per_row(self.row_ms, step_ms)
+
+
+def electrode_spec(duration_ms: float, step_ms: float) -> KernelSpec:
+    """Bins of lags of an electrode that charges: up to four, as equal as whole steps allow.
+
+    Parameters
+    ----------
+    duration_ms
+        Last lag, ms.
+    step_ms
+        Recorded step, ms; the coarsest where recordings differ.
+
+    Raises
+    ------
+    InputError
+        If the duration is shorter than a step.
+    """
+    steps = int(duration_ms / step_ms + 1e-9)
+    if steps < 1:
+        raise InputError(
+            f"kernels.electrode.duration_ms is {duration_ms:g} ms, but the recorded step is "
+            f"{step_ms:g} ms; set it to at least {step_ms:g}, or to 0 for no electrode kernel"
+        )
+    bins = min(_MOST_ELECTRODE_BINS, steps)
+    # Warped so weakly that bins are equal; `finest_ms` is their width.
+    return KernelSpec(duration_ms, bins, 1e3, "lags", duration_ms / bins)
 
 
 def samples_per_row(row_ms: float, step_ms: float, source: str = "recording") -> int:

@@ -1,10 +1,10 @@
 """The second-order random-walk prior of a kernel, in the kernel's own units.
 
 The prior penalises bends of the kernel on the warped axis. Its precision is scaled so that the
-kernel's prior sd, taken as the geometric mean over the axis, is one whatever the number of
-knots (Sørbye & Rue 2014, Spatial Statistics 8:39–51); the sampled scale is then an sd in
-MΩ/ms or mV. Bends leave one direction free, the straight line on the warped axis that ends at
-zero; a weak ridge makes the prior proper there.
+kernel's prior sd, taken as the geometric mean over the axis, is one whatever the basis and the
+number of its weights (Sørbye & Rue 2014, Spatial Statistics 8:39–51); the sampled scale is then an
+sd in MΩ/ms or mV. Bends leave one direction free, the straight line on the warped axis that ends
+at zero; a weak ridge makes the prior proper there.
 
 A kernel that is large at short lags and small at long ones bends much more early than late, and a
 prior with one sd for all lags would iron out the early part. Where a kernel *falls*, the prior is
@@ -28,27 +28,28 @@ _GRID = 400
 
 @dataclass(frozen=True, eq=False)
 class SmoothnessPrior:
-    """Prior precision of a kernel's weights, ``bend/σ² + ridge/(RIDGE_FACTOR·scale)²``.
+    """Prior of a kernel's weights, ``w = σ·bends x + RIDGE_FACTOR·scale·free y``, x and y normal.
 
     Attributes
     ----------
-    bend
-        Precision of the bends for a kernel sd of one, shape (weights, weights), of rank
-        weights − 1.
-    ridge
-        Precision of the free direction for an sd of one, same shape, of rank one.
+    bends
+        Bends that make a kernel of unit sd, shape (weights, weights − 1).
+    free
+        The free direction with a kernel of unit sd, shape (weights, 1).
     """
 
-    bend: FloatArray
-    ridge: FloatArray
+    bends: FloatArray
+    free: FloatArray
 
-    def precision(self, sd: float, scale: float) -> FloatArray:
-        """Prior precision for kernel sd `sd` where its half-normal prior has scale `scale`."""
-        return self.bend / sd**2 + self.ridge / (RIDGE_FACTOR * scale) ** 2
+    def covariance(self, sd: float, scale: float) -> FloatArray:
+        """Prior covariance for kernel sd `sd` where its half-normal prior has scale `scale`."""
+        ridge = (RIDGE_FACTOR * scale) ** 2 * self.free @ self.free.T
+        total: FloatArray = sd**2 * self.bends @ self.bends.T + ridge
+        return total
 
 
 def smoothness_prior(spec: KernelSpec, falls: bool = False) -> SmoothnessPrior:
-    """Build the prior of one kernel.
+    """Build the prior of one kernel of splines, cosines or lags.
 
     Parameters
     ----------
@@ -64,36 +65,33 @@ def smoothness_prior(spec: KernelSpec, falls: bool = False) -> SmoothnessPrior:
         bends and for the free direction.
     """
     n = spec.weights
-    # Second differences of (w_1 … w_n, 0). The weights belong to the knots' means (Greville
-    # abscissae), which clamped ends crowd, hence divided differences: a straight line on the
-    # warped axis must be free of penalty.
-    centres = _greville(spec)
+    # Second differences of (w_1 … w_n, 0). The places of the weights are uneven, crowded by
+    # clamped ends or rounded to rows, hence divided differences: a straight line on the warped
+    # axis must be free of penalty.
+    centres = spec.centres
     lift = np.exp(centres * np.log1p(spec.duration_ms / spec.warp_ms)) if falls else np.ones(n + 1)
     differences = (_divided_second_differences(centres) * lift)[:, :n]
-    structure = differences.T @ differences
-    free = ((1.0 - centres) / lift)[:n]
-    grid = np.expm1(
-        np.linspace(0, 1, _GRID, endpoint=False) * np.log1p(spec.duration_ms / spec.warp_ms)
+    free = ((1.0 - centres) / lift)[:n, None]
+    lags = spec.unwarp(np.linspace(0, 1, _GRID, endpoint=False))
+    basis = spec.evaluate(lags)
+
+    # The pseudo-inverse is a root of the covariance; the inverse of the precision, its square,
+    # would lose all digits with hundreds of weights.
+    bends = np.linalg.pinv(differences)
+    # It is orthogonal to the free direction as vectors of weights, which depends on where weights
+    # crowd. Kernels that are orthogonal on the axis do not.
+    lifted = basis * (1.0 + lags[:, None] / spec.warp_ms) if falls else basis
+    line = lifted @ free
+    bends = bends - free @ (line.T @ (lifted @ bends)) / np.sum(line**2)
+    return SmoothnessPrior(
+        bends=bends / _mean_sd(basis @ bends), free=free / _mean_sd(basis @ free)
     )
-    basis = spec.evaluate(spec.warp_ms * grid)
-
-    covariance = np.linalg.pinv(structure, rcond=1e-12, hermitian=True)
-    bend = structure * _mean_variance(basis, covariance)
-    direction = free / np.linalg.norm(free)
-    ridge = np.outer(direction, direction) * _mean_variance(basis, np.outer(direction, direction))
-    return SmoothnessPrior(bend=bend, ridge=ridge)
 
 
-def _mean_variance(basis: FloatArray, covariance: FloatArray) -> float:
-    """Geometric mean over lags of the kernel's variance."""
-    variance = np.einsum("lj,jk,lk->l", basis, covariance, basis)
-    return float(np.exp(np.mean(np.log(variance))))
-
-
-def _greville(spec: KernelSpec) -> FloatArray:
-    knots = spec._spline.t
-    degree = spec._spline.k
-    return np.array([knots[j + 1 : j + 1 + degree].mean() for j in range(spec.weights + 1)])
+def _mean_sd(responses: FloatArray) -> float:
+    """Geometric mean over lags of the sd of a kernel, from its response to each unit normal."""
+    variance = np.sum(responses**2, axis=1)
+    return float(np.exp(np.mean(np.log(variance)) / 2))
 
 
 def _divided_second_differences(x: FloatArray) -> FloatArray:

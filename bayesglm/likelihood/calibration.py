@@ -1,9 +1,9 @@
 """Least squares on a digest, and what its error really is.
 
-The estimate is ordinary least squares (with sweep offsets taken out). Its covariance is not
-``σ²H⁻¹``: the residual of a cell is correlated and holds the cell's nonlinearity. It is
-estimated from how much the estimate changes when independent units are left out, shrunk
-towards what the residual's own spectrum predicts:
+The estimate is ordinary least squares (with offsets and drifts of sweeps taken out). Its
+covariance is not ``σ²H⁻¹``: the residual of a cell is correlated and holds the cell's
+nonlinearity. It is estimated from how much the estimate changes when independent units are left
+out, shrunk towards what the residual's own spectrum predicts:
 
     V = (B·V_jack + K·D V0 D) / (B + K)
 
@@ -13,6 +13,10 @@ is the least-squares sandwich under a residual of spectrum S (C_f the Gram matri
 Statist 17:1217–1241) for blocks, Cameron, Gelbach & Miller (2011, J Bus Econ Stat 29:238–249)
 for clusters, Müller (2013, Econometrica 81:1805–1849) for posteriors built on a sandwich, Bell &
 McCaffrey (2002, Survey Methodology 28:169–181) for the degrees of freedom.
+
+Where currents are repeated, V_jack is that of two-way clusters (by stimulus and by sweep, see
+`clusters`) and B the number of different stimuli. Blocks shorter than 20 correlation times of the
+residual add the products of neighbours. What comes out negative is set to zero and counted.
 
 All of it happens in whitened coordinates z, ``w = M z`` with ``MᵀHM = I``, on the directions that
 the recording excites.
@@ -28,17 +32,12 @@ from scipy.stats import norm
 from scipy.stats import t as student_t
 
 from bayesglm.kernels.design import VoltageDesign
+from bayesglm.likelihood.clusters import stimulus_clusters
 from bayesglm.likelihood.digest import VoltageDigest
-from bayesglm.likelihood.least_squares import (
-    RANK_TOLERANCE,
-    LeastSquares,
-    spectral_covariance,
-)
-from bayesglm.likelihood.offsets import marginalise, sweep_sums
+from bayesglm.likelihood.jackknife import MAX_LEVERAGE, UnitCount, jackknife, satterthwaite
+from bayesglm.likelihood.least_squares import RANK_TOLERANCE, LeastSquares, spectral_covariance
+from bayesglm.likelihood.offsets import effect_columns, effect_products, shrinkage, sweep_sums
 from bayesglm.recording.recording import FloatArray, IntArray
-
-#: Of a direction that one unit carries to more than this share, leaving it out tells nothing.
-_MAX_LEVERAGE = 0.5
 
 
 @dataclass(frozen=True, eq=False)
@@ -62,9 +61,12 @@ class Calibration:
     freedom
         ν, the smallest Satterthwaite degrees of freedom of the reported scalars.
     leverage
-        Largest share of any direction that each unit carries, shape (B,).
+        Largest share of any direction that each unit, with the repeats of its current, carries,
+        shape (B,).
     changes
         ẑ − ẑ without each unit, shape (B, K).
+    units
+        How many units are independent, and how they were counted.
     """
 
     fit: LeastSquares
@@ -77,18 +79,19 @@ class Calibration:
     freedom: float
     leverage: FloatArray
     changes: FloatArray
+    units: UnitCount
 
     @property
     def precision(self) -> FloatArray:
         """Precision of the weights, shape (P, P); zero along directions never excited."""
-        back = np.linalg.pinv(self.fit.basis)
+        back = self.fit.back
         inner: FloatArray = back.T @ np.linalg.inv(self.covariance) @ back
         return (inner + inner.T) / 2
 
     @property
     def white_precision(self) -> FloatArray:
         """Precision of the weights if residuals were white, shape (P, P)."""
-        back = np.linalg.pinv(self.fit.basis)
+        back = self.fit.back
         inner: FloatArray = back.T @ back / self.fit.residual_variance
         return (inner + inner.T) / 2
 
@@ -117,79 +120,86 @@ def calibrate(
     -------
     Calibration
     """
-    shares, changes = _leave_one_out(digest, fit)
     between = _between_sweeps(digest, fit)
-    n_units, rank = digest.n_units, fit.rank
-    jackknife = (n_units - 1) / n_units * changes.T @ changes + between[1]
+    spread = jackknife(digest, fit, between[1])
+    rank = fit.rank
     within, spectrum = spectral_covariance(digest, fit)
     spectral: FloatArray = within + between[0]
-    ratio = inflation or _kernel_ratio(digest.design, fit, jackknife, spectral)
+    ratio = inflation or _kernel_ratio(digest.design, fit, spread.covariance, spectral)
     if inflation is None:
         inflation = {name: max(1.0, value) for name, value in ratio.items()}
         target = _inflated(digest.design, fit, spectral, inflation)
-        covariance: FloatArray = (n_units * jackknife + rank * target) / (n_units + rank)
+        n = spread.units.clusters
+        covariance: FloatArray = (n * spread.covariance + rank * target) / (n + rank)
+        covariance = _where_one_decides(spread.shares, covariance, target)
     else:
         covariance = _inflated(digest.design, fit, spectral, inflation)
+    leverage = np.linalg.eigvalsh(spread.shares)[:, -1]
     return Calibration(
         fit=fit,
         covariance=(covariance + covariance.T) / 2,
-        jackknife=jackknife,
+        jackknife=spread.covariance,
         spectral=spectral,
         ratio=ratio,
         inflation=inflation,
         spectrum=spectrum,
-        freedom=_satterthwaite(shares, contrasts @ fit.basis),
-        leverage=np.asarray(np.linalg.eigvalsh(shares)[:, -1], dtype=np.float64),
-        changes=changes,
+        freedom=satterthwaite(spread.shares, contrasts @ fit.basis),
+        leverage=np.asarray(leverage[spread.labels], dtype=np.float64),
+        changes=spread.changes,
+        units=spread.units,
     )
 
 
-def _leave_one_out(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArray, FloatArray]:
-    """Share of the information each unit carries, (B, K, K), and ẑ − ẑ without it, (B, K).
+def _where_one_decides(
+    shares: FloatArray, covariance: FloatArray, target: FloatArray
+) -> FloatArray:
+    """Raise the covariance to ``D V0 D`` in directions that one cluster carries to more than half.
 
-    Leaving a block out of a sweep leaves the rest of that sweep, with an offset of its own.
-    """
-    sums = sweep_sums(digest.gram, digest.sweep)[digest.sweep]
-    lost = marginalise(sums, fit.offset_ratio) - marginalise(sums - digest.gram, fit.offset_ratio)
-    shares = np.einsum("pk,bpq,ql->bkl", fit.basis, lost[:, :-1, :-1], fit.basis)
-    plain = np.append(-fit.weights, 1.0)
-    scores = np.einsum("pk,bpq,q->bk", fit.basis, lost[:, :-1, :], plain)
-    return shares, np.einsum("bkl,bl->bk", _left_over_inverse(shares), scores)
-
-
-def _left_over_inverse(shares: FloatArray) -> FloatArray:
-    """``(I − L_b)⁻¹`` of each unit, leverage clipped, shape (B, K, K).
-
-    Where one unit carries nearly all, the rest says nothing and the change without it would be
-    noise over nothing; the spectral part then speaks for that direction.
+    Leaving that cluster out tells nothing there, so that the jackknife would be too small.
     """
     values, vectors = np.linalg.eigh(shares)
-    factor = 1.0 / (1.0 - np.clip(values, 0.0, _MAX_LEVERAGE))
-    inverse: FloatArray = np.einsum("bkj,bj,blj->bkl", vectors, factor, vectors)
-    return inverse
+    decided = np.swapaxes(vectors, 1, 2)[values > MAX_LEVERAGE]
+    if not len(decided):
+        return covariance
+    _, size, rows = np.linalg.svd(decided, full_matrices=False)
+    span = rows[size > RANK_TOLERANCE * size[0]]
+    missing, directions = np.linalg.eigh(span @ (target - covariance) @ span.T)
+    root = span.T @ (directions * np.sqrt(np.maximum(missing, 0.0)))
+    raised: FloatArray = covariance + root @ root.T
+    return raised
 
 
 def _between_sweeps(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArray, FloatArray]:
-    """What the spread of sweep offsets adds to the covariance: of all sweeps, of cut ones.
+    """What the spread of sweeps' effects adds to the covariance: of all sweeps, of cut ones.
 
-    A jackknife over whole sweeps sees their offsets vary; one over blocks of a sweep does not.
-    The variance of S offsets is known with S − 1 degrees of freedom: it is raised so that a 90 %
+    A jackknife over whole sweeps sees their effects vary; one over blocks of a sweep does not.
+    The variance of S effects is known with S − 1 degrees of freedom: it is raised so that a 90 %
     interval of the normal is as wide as that of Student's t.
     """
-    sums = sweep_sums(digest.gram, digest.sweep)
-    weight = 1.0 / (1.0 + fit.offset_ratio * sums[:, 0, 0])
-    pull = weight[:, None] * sums[:, 0, :-1] @ fit.basis
+    sums = sweep_sums(digest.sums, digest.sweep)
+    n_effects, n_weights = len(fit.sweep_ratios), len(fit.weights)
+    # A sweep's effects enter the scores as XᵀZ(I − K ZᵀZ).
+    inner = effect_products(sums, n_effects)
+    left = np.eye(n_effects) - shrinkage(sums, fit.sweep_ratios) @ inner
+    across = sums[:, effect_columns(n_effects), :n_weights]
+    pull = np.einsum("pk,srp,srq->sqk", fit.basis, across, left, optimize=True)
     freedom = float(max(int(np.count_nonzero(sums[:, 0, 0])) - 1, 1))
-    variance = fit.offset_variance * (student_t.ppf(0.95, freedom) / norm.ppf(0.95)) ** 2
+    widened = student_t.ppf(0.95, freedom) / norm.ppf(0.95)
+    pull = pull * (widened * np.sqrt(fit.sweep_variances))[:, None]
     cut = np.bincount(digest.sweep, minlength=len(sums)) > 1
-    of_all: FloatArray = variance * pull.T @ pull
-    return of_all, variance * pull[cut].T @ pull[cut]
+    return _products(pull), _products(pull[cut])
+
+
+def _products(vectors: FloatArray) -> FloatArray:
+    flat = vectors.reshape(-1, vectors.shape[-1])
+    products: FloatArray = flat.T @ flat
+    return products
 
 
 def inflation_within(
     digest: VoltageDigest, calibration: Calibration, groups: Sequence[IntArray]
 ) -> dict[str, float]:
-    """D of each kernel from the spread of units inside groups, differences between them removed.
+    """D of each kernel from the spread of clusters inside groups, differences between them removed.
 
     Parameters
     ----------
@@ -204,16 +214,20 @@ def inflation_within(
         By kernel, at least one.
     """
     rank = calibration.fit.rank
-    within, units = np.zeros((rank, rank)), 0
+    within, found, stimulus = np.zeros((rank, rank)), 0, stimulus_clusters(digest)
     for group in groups:
-        if len(group) > 1:
-            centred = calibration.changes[group] - calibration.changes[group].mean(axis=0)
-            within += len(group) / (len(group) - 1) * centred.T @ centred
-            units += len(group)
-    if not units:
+        clusters = np.unique(stimulus[group], return_inverse=True)[1]
+        n = int(clusters.max(initial=-1)) + 1
+        if n > 1:
+            changes = np.zeros((n, rank))
+            np.add.at(changes, clusters, calibration.changes[group])
+            centred = changes - changes.mean(axis=0)
+            within += n / (n - 1) * centred.T @ centred
+            found += n
+    if not found:
         return dict.fromkeys(digest.design.kernels, 1.0)
-    # As if the groups were all the units there are.
-    within *= digest.n_units / units
+    # As if the groups held all the clusters there are.
+    within *= calibration.units.clusters / found
     ratio = _kernel_ratio(digest.design, calibration.fit, within, calibration.spectral)
     return {name: max(1.0, value) for name, value in ratio.items()}
 
@@ -244,26 +258,6 @@ def _inflated(
     for name, factor in inflation.items():
         if name in design.columns:
             factors[design.columns[name]] = factor
-    map_ = np.linalg.pinv(fit.basis) @ (factors[:, None] * fit.basis)
+    map_ = fit.back @ (factors[:, None] * fit.basis)
     inflated: FloatArray = map_ @ spectral @ map_.T
     return inflated
-
-
-def _satterthwaite(shares: FloatArray, contrasts: FloatArray) -> float:
-    """Smallest degrees of freedom of the jackknife variance of the given contrasts.
-
-    The jackknife variance of ``cᵀz`` is a sum of squares of the units' changes. Under white
-    residuals these have covariance ``G_b(δ_bb' L_b − L_b L_b')G_b'`` with L the units' shares and
-    ``G = (I − L)⁻¹``; matching two moments gives ν = (tr)²/tr(squared).
-    """
-    inverse = _left_over_inverse(shares)
-    smallest = float(len(shares) - 1)
-    for contrast in contrasts:
-        moved = inverse @ contrast
-        pulled = np.einsum("bkl,bl->bk", shares, moved)
-        cross = -pulled @ pulled.T
-        cross[np.diag_indices_from(cross)] += np.einsum("bk,bk->b", moved, pulled)
-        total = np.trace(cross)
-        if total > 0:
-            smallest = min(smallest, float(total**2 / np.sum(cross**2)))
-    return max(smallest, 1.0)

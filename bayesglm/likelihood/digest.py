@@ -15,6 +15,7 @@ import zipfile
 import zlib
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass, replace
+from functools import cached_property
 from pathlib import Path
 from typing import Any, Final
 
@@ -25,7 +26,7 @@ from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.recording.recording import FloatArray, IntArray
 
-_VERSION: Final = 1
+_VERSION: Final = 2
 
 #: What NumPy raises for a file that is no NPZ, or one cut short.
 _UNREADABLE: Final = (OSError, EOFError, ValueError, TypeError, zipfile.BadZipFile, zlib.error)
@@ -43,10 +44,11 @@ class VoltageDigest:
     ----------
     design
         The linear model the rows belong to.
-    gram
-        ``Σ zzᵀ`` a unit with z = (x, v), shape (B, P + 1, P + 1).
-    bands
-        The same by frequency band, shape (B, F, P + 1, P + 1); sums over F to `gram`.
+    sums
+        ``Σ zzᵀ`` a unit with z = (x, v), shape (B, P + 1, P + 1); with z = (x, t, v), where the
+        design has a drift along t, shape (B, P + 2, P + 2).
+    band_sums
+        The same by frequency band, shape (B, F, …); sums over F to `sums`.
     band_share
         Share of white noise that falls in each band, shape (B, F).
     sweep
@@ -59,6 +61,9 @@ class VoltageDigest:
         Number of spikes in the unit, shape (B,).
     seconds
         Recorded time of the unit, s, shape (B,).
+    stimulus
+        Hash of the unit's current, shape (B,): units with the same current have the same, those
+        of constant current each one of their own.
     labels
         The unit in words, such as ``sweep 3`` or ``sweep 0, 2000–3000 ms``.
     sources
@@ -66,26 +71,43 @@ class VoltageDigest:
     """
 
     design: VoltageDesign
-    gram: FloatArray
-    bands: FloatArray
+    sums: FloatArray
+    band_sums: FloatArray
     band_share: FloatArray
     sweep: IntArray
     drive_nA: FloatArray
     current_sd_nA: FloatArray
     spikes: IntArray
     seconds: FloatArray
+    stimulus: IntArray
     labels: tuple[str, ...]
     sources: tuple[tuple[str, str], ...] = ()
+
+    @cached_property
+    def gram(self) -> FloatArray:
+        """``Σ zzᵀ`` a unit with z = (x, v), shape (B, P + 1, P + 1)."""
+        return self._without_drift(self.sums)
+
+    @cached_property
+    def bands(self) -> FloatArray:
+        """`gram` by frequency band, shape (B, F, P + 1, P + 1)."""
+        return self._without_drift(self.band_sums)
+
+    def _without_drift(self, sums: FloatArray) -> FloatArray:
+        if not self.design.drift:
+            return sums
+        kept = np.delete(np.arange(sums.shape[-1]), -2)
+        return sums[..., kept[:, None], kept]
 
     @property
     def n_units(self) -> int:
         """Number of units, B."""
-        return len(self.gram)
+        return len(self.sums)
 
     @property
     def n_rows(self) -> float:
         """Number of rows in all units."""
-        return float(self.gram[:, 0, 0].sum())
+        return float(self.sums[:, 0, 0].sum())
 
     def take(self, units: IntArray) -> VoltageDigest:
         """Keep the units at the given indices."""
@@ -110,8 +132,8 @@ class VoltageDigest:
         weights = [self.seconds[g] / self.seconds[g].sum() for g in groups]
         return replace(
             self,
-            gram=np.array([self.gram[g].sum(axis=0) for g in groups]),
-            bands=np.array([self.bands[g].sum(axis=0) for g in groups]),
+            sums=np.array([self.sums[g].sum(axis=0) for g in groups]),
+            band_sums=np.array([self.band_sums[g].sum(axis=0) for g in groups]),
             band_share=np.array(
                 [w @ self.band_share[g] for g, w in zip(groups, weights, strict=True)]
             ),
@@ -125,6 +147,7 @@ class VoltageDigest:
             ),
             spikes=np.array([self.spikes[g].sum() for g in groups]),
             seconds=np.array([self.seconds[g].sum() for g in groups]),
+            stimulus=np.array([hash_of(self.stimulus[g].tobytes()) for g in groups]),
             labels=tuple(_joined(self.labels[g[0]], self.labels[g[-1]]) for g in groups),
         )
 
@@ -168,7 +191,8 @@ class VoltageDigest:
 
 
 _UNIT_ARRAYS: Final = (
-    "gram", "bands", "band_share", "sweep", "drive_nA", "current_sd_nA", "spikes", "seconds",
+    "sums", "band_sums", "band_share", "sweep", "drive_nA", "current_sd_nA", "spikes", "seconds",
+    "stimulus",
 )  # fmt: skip
 
 
@@ -206,6 +230,11 @@ def add(digests: Sequence[VoltageDigest]) -> VoltageDigest:
     return VoltageDigest(design=first.design, labels=labels, sources=sources, **arrays)
 
 
+def hash_of(content: bytes) -> int:
+    """Hash as a signed integer of 64 bits."""
+    return int.from_bytes(hashlib.sha256(content).digest()[:8], "big", signed=True)
+
+
 def content_hash(digest: VoltageDigest) -> str:
     """Hash of the numbers in a digest: equal for equal digests on one machine."""
     h = hashlib.sha256()
@@ -215,12 +244,13 @@ def content_hash(digest: VoltageDigest) -> str:
 
 
 def _design_from(fields: dict[str, Any]) -> VoltageDesign:
-    after_spike = fields.pop("after_spike")
+    after_spike, electrode = fields.pop("after_spike"), fields.pop("electrode_kernel")
     window = fields.pop("spike_window_ms")
     return VoltageDesign(
         input=KernelSpec(**fields.pop("input")),
         after_spike=KernelSpec(**after_spike) if after_spike is not None else None,
         spike_window_ms=(window[0], window[1]),
+        electrode_kernel=KernelSpec(**electrode) if electrode is not None else None,
         **fields,
     )
 
@@ -229,4 +259,4 @@ def _joined(first: str, last: str) -> str:
     """Label of a unit that runs from one unit to another of the same sweep."""
     if first == last:
         return first
-    return f"{first.split('–')[0]}–{last.split('–')[-1]}"
+    return f"{first.rpartition('–')[0]}–{last.rpartition('–')[2]}"

@@ -11,7 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from functools import partial
+from itertools import pairwise
 
 import jax
 import jax.numpy as jnp
@@ -20,10 +20,17 @@ import numpy as np
 from bayesglm import backend as backend
 from bayesglm.errors import InputError
 from bayesglm.kernels.design import RowFilter, VoltageDesign, filter_rows, row_filter, row_means
-from bayesglm.likelihood.digest import BAND_EDGES_HZ, VoltageDigest, add
+from bayesglm.likelihood.chunks import (
+    N_FFT,
+    band_slices,
+    chunk_sums,
+    pad_to,
+    padded,
+    white_share,
+    zero_sums,
+)
+from bayesglm.likelihood.digest import VoltageDigest, add, hash_of
 from bayesglm.recording.recording import BoolArray, FloatArray, IntArray, Recording, Sweep
-
-_N_FFT = 8192
 
 
 @dataclass(frozen=True, eq=False)
@@ -50,7 +57,7 @@ def voltage_digest(
         The linear model.
     block_ms
         Length of a unit in ms; sweeps are cut evenly into blocks of about this length. None
-        makes each sweep one unit.
+        makes each sweep of the file one unit.
 
     Returns
     -------
@@ -62,7 +69,7 @@ def voltage_digest(
         If a kernel is longer than the longest sweep, or no row is left.
     """
     digest = add([_recording_digest(recording, design, block_ms) for recording in recordings])
-    used = np.flatnonzero(digest.gram[:, 0, 0] > 0)
+    used = np.flatnonzero(digest.sums[:, 0, 0] > 0)
     if len(used) == 0:
         raise InputError(
             f"{recordings[0].source}: every row is masked; widen the selection or shorten "
@@ -82,7 +89,7 @@ def _recording_digest(
     for index, sweep in enumerate(recording.sweeps):
         rows = _sweep_rows(sweep, design, recording.step_ms, m, filters)
         n_rows = len(rows.voltage)
-        for start, stop in _unit_edges(n_rows, design.row_ms, block_ms):
+        for start, stop in _unit_edges(sweep, n_rows, m, block_ms, design.row_ms):
             gram, bands, share = _unit_sums(rows, start, stop, filters, design)
             samples = slice(start * m, stop * m)
             current = sweep.current[samples]
@@ -91,15 +98,16 @@ def _recording_digest(
             span = f", {start * design.row_ms:.0f}–{stop * design.row_ms:.0f} ms"
             units.append(
                 {
-                    "gram": gram,
-                    "bands": bands,
+                    "sums": gram,
+                    "band_sums": bands,
                     "band_share": share,
                     "sweep": index,
                     "drive_nA": float(own.mean()),
                     "current_sd_nA": float(current.std()),
                     "spikes": _spikes_between(sweep, samples.start, samples.stop),
                     "seconds": (stop - start) * design.row_ms / 1e3,
-                    "labels": f"sweep {sweep.number}" + ("" if whole else span),
+                    "stimulus": _stimulus(recording, index, samples),
+                    "labels": sweep.label + ("" if whole else span),
                 }
             )
     columns = {name: [unit[name] for unit in units] for name in units[0]}
@@ -113,49 +121,59 @@ def _recording_digest(
 
 
 def row_digest(
-    rows: FloatArray, voltage: FloatArray, units: IntArray, sweeps: IntArray, design: VoltageDesign
+    rows: FloatArray,
+    voltage: FloatArray,
+    units: IntArray,
+    sweeps: IntArray,
+    design: VoltageDesign,
+    stimuli: IntArray | None = None,
 ) -> VoltageDigest:
     """Digest of rows given as a matrix: for designs made elsewhere, and for tests.
 
     Parameters
     ----------
     rows
-        Columns x, shape (n, P); the first is the constant one.
+        Columns x, shape (n, P); the first is the constant one. With a drift t is the last of
+        them, shape (n, P + 1).
     voltage
         Shape (n,).
     units, sweeps
         Index of the unit and of the sweep of each row, shape (n,); rows of a unit are neighbours.
     design
         What the columns are called.
+    stimuli
+        Stimulus of each row, shape (n,); each unit's own where not given.
 
     Returns
     -------
     VoltageDigest
     """
+    stimuli = units if stimuli is None else stimuli
     labels = np.unique(units)
     grams, bands, shares = [], [], []
     z = np.column_stack([rows, voltage])
     for unit in labels:
-        gram, band, _ = _zero_sums(z.shape[1])
+        gram, band, _ = zero_sums(z.shape[1])
         members = z[units == unit]
-        for start in range(0, len(members), _N_FFT):
-            chunk = _padded(members[start : start + _N_FFT], _N_FFT)
-            g, b = _chunk_sums(jnp.asarray(chunk), _band_slices(design.row_ms))
+        for start in range(0, len(members), N_FFT):
+            chunk = padded(members[start : start + N_FFT], N_FFT)
+            g, b = chunk_sums(jnp.asarray(chunk), band_slices(design.row_ms))
             gram, band = gram + np.asarray(g), band + np.asarray(b)
         grams.append(gram)
         bands.append(band)
-        shares.append(_white_share(design.row_ms))
+        shares.append(white_share(design.row_ms))
     n = len(labels)
     return VoltageDigest(
         design=design,
-        gram=np.array(grams),
-        bands=np.array(bands),
+        sums=np.array(grams),
+        band_sums=np.array(bands),
         band_share=np.array(shares),
         sweep=np.array([sweeps[units == unit][0] for unit in labels]),
         drive_nA=np.zeros(n),
         current_sd_nA=np.ones(n),
         spikes=np.zeros(n, dtype=np.int64),
         seconds=np.array([(units == unit).sum() * design.row_ms / 1e3 for unit in labels]),
+        stimulus=np.array([stimuli[units == unit][0] for unit in labels]),
         labels=tuple(f"unit {unit}" for unit in labels),
     )
 
@@ -187,6 +205,12 @@ def kept_rows(sweep: Sweep, design: VoltageDesign, step_ms: float, m: int) -> Bo
     return np.asarray(keep[: rows * m].reshape(rows, m).all(axis=1), dtype=np.bool_)
 
 
+def drift_column(n_rows: int) -> FloatArray:
+    """A straight line over a sweep with mean zero and variance one, shape (n_rows,)."""
+    line: FloatArray = np.sqrt(3.0) * np.linspace(-1.0, 1.0, n_rows)
+    return line
+
+
 def predict_rows(
     sweep: Sweep, design: VoltageDesign, step_ms: float, weights: FloatArray
 ) -> FloatArray:
@@ -216,7 +240,7 @@ def predict_rows(
     for start in range(0, n_rows, chunk):
         stop = min(start + chunk, n_rows)
         z = np.asarray(_design_rows(rows, start, stop, filters, design, masked=False))
-        out[start:stop] = z[: stop - start, :-1] @ weights
+        out[start:stop] = z[: stop - start, : design.n_weights] @ weights
     return out
 
 
@@ -246,7 +270,7 @@ def _filters(design: VoltageDesign, step_ms: float, m: int) -> dict[str, RowFilt
 
 def _transform_rows(design: VoltageDesign) -> int:
     longest = max(spec.duration_ms for spec in design.kernels.values()) / design.row_ms
-    n_fft = _N_FFT
+    n_fft = N_FFT
     while n_fft < 4 * longest:
         n_fft *= 2
     return n_fft
@@ -269,13 +293,36 @@ def _sweep_rows(
     voltage = row_means(np.where(sweep.keep, sweep.voltage, 0.0), m)
     # Before a sweep the current is taken to have been its first value.
     current = filters["input"].phases(sweep.current * step_ms, before=sweep.current[0] * step_ms)
-    return _SweepRows(current, spikes, row_means(sweep.current, m), voltage, keep)
+    electrode = _electrode_columns(sweep.current, design, step_ms, m)
+    return _SweepRows(current, spikes, electrode, voltage, keep)
 
 
-def _unit_edges(n_rows: int, row_ms: float, block_ms: float | None) -> list[tuple[int, int]]:
-    n_blocks = 1 if block_ms is None else max(1, int(n_rows * row_ms / block_ms + 1e-9))
-    edges = np.linspace(0, n_rows, n_blocks + 1).round().astype(int)
-    return list(zip(edges[:-1].tolist(), edges[1:].tolist(), strict=True))
+def _electrode_columns(
+    current: FloatArray, design: VoltageDesign, step_ms: float, m: int
+) -> FloatArray:
+    """Current of the same bin, and its mean over each bin of the electrode's lags, (n_rows, …)."""
+    same = row_means(current, m)[:, None]
+    if design.electrode_kernel is None:
+        return same
+    bins = design.electrode_kernel.evaluate(design.electrode_kernel.lags(step_ms))
+    past = np.concatenate([np.full(len(bins), current[0]), current])
+    delayed = np.zeros((len(same), bins.shape[1]))
+    for k, share in enumerate(bins / bins.sum(axis=0), start=1):
+        first = len(bins) - k
+        delayed += row_means(past[first : first + len(current)], m)[:, None] * share
+    return np.concatenate([same, delayed], axis=1)
+
+
+def _unit_edges(
+    sweep: Sweep, n_rows: int, m: int, block_ms: float | None, row_ms: float
+) -> list[tuple[int, int]]:
+    """First row and the one past the end of each unit: blocks, or the file's sweeps."""
+    if block_ms is None:
+        edges = [0, *(round(first / m) for _, first in sweep.joined[1:]), n_rows]
+    else:
+        n_blocks = max(1, int(n_rows * row_ms / block_ms + 1e-9))
+        edges = np.linspace(0, n_rows, n_blocks + 1).round().astype(int).tolist()
+    return list(pairwise(edges))
 
 
 def _spikes_between(sweep: Sweep, start: int, stop: int) -> int:
@@ -284,17 +331,25 @@ def _spikes_between(sweep: Sweep, start: int, stop: int) -> int:
     return int(np.count_nonzero((sweep.spikes >= start) & (sweep.spikes < stop)))
 
 
+def _stimulus(recording: Recording, sweep: int, samples: slice) -> int:
+    """Hash of a unit's current; of its place where the current is constant and so says nothing."""
+    current = recording.sweeps[sweep].current[samples]
+    if np.ptp(current) > 0:
+        return hash_of(current.tobytes())
+    return hash_of(f"{recording.source} {sweep} {samples}".encode())
+
+
 def _unit_sums(
     rows: _SweepRows, start: int, stop: int, filters: dict[str, RowFilter], design: VoltageDesign
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
-    gram, bands, share = _zero_sums(design.n_weights + 1)
+    gram, bands, share = zero_sums(design.n_weights + design.n_sweep_effects)
     chunk = _chunk(filters)
-    slices = _band_slices(design.row_ms, _transform_rows(design))
+    slices = band_slices(design.row_ms, _transform_rows(design))
     for a in range(start, stop, chunk):
         z = _design_rows(rows, a, min(a + chunk, stop), filters, design, masked=True)
-        g, b = _chunk_sums(_pad_to(z, _transform_rows(design)), slices)
+        g, b = chunk_sums(pad_to(z, _transform_rows(design)), slices)
         gram, bands = gram + np.asarray(g), bands + np.asarray(b)
-    return gram, bands, share + _white_share(design.row_ms, _transform_rows(design))
+    return gram, bands, share + white_share(design.row_ms, _transform_rows(design))
 
 
 def _design_rows(
@@ -305,75 +360,28 @@ def _design_rows(
     design: VoltageDesign,
     masked: bool,
 ) -> jax.Array:
-    """Rows ``(x, v)`` of a chunk, shape (chunk, P + 1); zero after `stop` and where masked."""
+    """Rows ``(x, v)`` of a chunk, ``(x, t, v)`` with a drift, shape (chunk, P + 1 or P + 2).
+
+    Zero after `stop` and where masked.
+    """
     chunk = _chunk(filters)
     here = slice(start, stop)
     inside = rows.keep[here] if masked else np.ones(stop - start, dtype=np.bool_)
-    columns = [_padded(np.ones((stop - start, 1)), chunk)]
+    columns = [padded(np.ones((stop - start, 1)), chunk)]
     if design.electrode:
-        columns.append(_padded(rows.electrode[here, None], chunk))
+        columns.append(padded(rows.electrode[here], chunk))
     for name, signal in (("input", rows.current), ("after_spike", rows.spikes)):
         if signal is not None:
             f = filters[name]
-            piece = _padded(signal[start : stop + f.history], f.n_fft)
+            piece = padded(signal[start : stop + f.history], f.n_fft)
             columns.append(filter_rows(jnp.asarray(piece), f.response, f.history)[:chunk])
-    columns.append(_padded(rows.voltage[here, None], chunk))
-    return _join_columns(columns, jnp.asarray(_padded(inside[:, None].astype(float), chunk)))
+    if design.drift:
+        columns.append(padded(drift_column(len(rows.voltage))[here, None], chunk))
+    columns.append(padded(rows.voltage[here, None], chunk))
+    return _join_columns(columns, jnp.asarray(padded(inside[:, None].astype(float), chunk)))
 
 
 @jax.jit
 def _join_columns(columns: list[jax.Array], mask: jax.Array) -> jax.Array:
     # Selecting, not multiplying: past the end of a sweep the filters ring with what follows.
     return jnp.where(mask > 0, jnp.concatenate(columns, axis=1), 0.0)
-
-
-@partial(jax.jit, static_argnames=("slices",))
-def _chunk_sums(z: jax.Array, slices: tuple[tuple[int, int], ...]) -> tuple[jax.Array, jax.Array]:
-    """Gram matrix of a chunk, whole and by frequency band.
-
-    The transform of a real signal holds each frequency once but for the first and the last, so
-    the others count twice.
-    """
-    n = z.shape[0]
-    spectrum = jnp.fft.rfft(z, axis=0)
-    counts = jnp.full(spectrum.shape[0], 2.0).at[0].set(1.0).at[-1].set(1.0) / n
-    weighted = jnp.sqrt(counts)[:, None] * spectrum
-    bands = []
-    for start, stop in slices:
-        part = weighted[start:stop]
-        bands.append(part.real.T @ part.real + part.imag.T @ part.imag)
-    return z.T @ z, jnp.stack(bands)
-
-
-def _band_slices(row_ms: float, n_fft: int = _N_FFT) -> tuple[tuple[int, int], ...]:
-    """Index range of each frequency band in a real transform of `n_fft` rows (n_fft even)."""
-    frequency_Hz = np.fft.rfftfreq(n_fft, d=row_ms / 1e3)
-    edges = np.searchsorted(frequency_Hz, BAND_EDGES_HZ)
-    stops = np.append(edges, len(frequency_Hz))
-    starts = np.insert(stops[:-1], 0, 0)
-    return tuple(zip(starts.tolist(), stops.tolist(), strict=True))
-
-
-def _white_share(row_ms: float, n_fft: int = _N_FFT) -> FloatArray:
-    counts = np.full(n_fft // 2 + 1, 2.0)
-    counts[[0, -1]] = 1.0
-    slices = _band_slices(row_ms, n_fft)
-    return np.array([counts[start:stop].sum() / n_fft for start, stop in slices])
-
-
-def _zero_sums(width: int) -> tuple[FloatArray, FloatArray, FloatArray]:
-    n_bands = len(BAND_EDGES_HZ) + 1
-    return np.zeros((width, width)), np.zeros((n_bands, width, width)), np.zeros(n_bands)
-
-
-def _padded(array: FloatArray, rows: int) -> FloatArray:
-    """Zeros after the last row, so that every chunk has one shape and nothing recompiles."""
-    if len(array) == rows:
-        return array
-    out = np.zeros((rows, *array.shape[1:]))
-    out[: len(array)] = array
-    return out
-
-
-def _pad_to(z: jax.Array, rows: int) -> jax.Array:
-    return jnp.pad(z, ((0, rows - z.shape[0]), (0, 0)))

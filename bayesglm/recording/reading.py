@@ -10,49 +10,29 @@ from __future__ import annotations
 from dataclasses import dataclass
 from itertools import pairwise
 from pathlib import Path
+from typing import Final
 
 import numpy as np
-from numpy.typing import NDArray
 
-from bayesglm.errors import InputError, nearest
+from bayesglm.errors import InputError
 from bayesglm.recording import timegrid
+from bayesglm.recording.columns import TEXT, Column, NumberTable, identify, refuse_values
+from bayesglm.recording.npz import read_npz
 from bayesglm.recording.recording import FloatArray, IntArray, Recording, Sweep, TimeJump
-from bayesglm.recording.table import TextTable, open_table, parse_numbers
-from bayesglm.units import UNIT_FACTORS, parse_header
+from bayesglm.recording.table import open_table, parse_numbers
 
-#: Largest values a current-clamp recording can hold; more means the header's unit is wrong.
-MAX_VOLTAGE_MV = 1000.0
-#: No recording of a membrane stays this close to zero throughout, mV: such a file holds volts.
-MIN_VOLTAGE_MV = 1.0
-MAX_CURRENT_NA = 100.0
-
-SPIKES_FROM_FILE = "spike column of the file"
-
-_KNOWN = (
-    *(f"{quantity}_{unit}" for quantity, units in UNIT_FACTORS.items() for unit in units),
-    "spike",
-    "sweep",
-)
-_REQUIRED = ("time", "current", "voltage")
-#: Quantities in which an empty field is a missing sample; in all others it is an error.
-_MAY_BE_MISSING = ("current", "voltage")
-
-
-@dataclass(frozen=True)
-class _Column:
-    """Where a quantity stands in the file and the factor to the unit used inside."""
-
-    header: str
-    factor: float = 1.0
+SPIKES_FROM_FILE: Final = "spike column of the file"
 
 
 def recording_name(path: Path) -> str:
-    """Return the name of a recording: its file's name without ``.csv`` and ``.gz``."""
+    """Return a recording's name: its file's without ``.csv``, ``.csv.gz`` or ``.npz``."""
+    if path.suffix == ".npz":
+        return path.stem
     return path.name.removesuffix(".gz").removesuffix(".csv")
 
 
 def read_recording(path: str | Path) -> Recording:
-    """Read one recording from a CSV file.
+    """Read one recording from a file of text (CSV) or of arrays (NPZ).
 
     Parameters
     ----------
@@ -64,6 +44,9 @@ def read_recording(path: str | Path) -> Recording:
         the header that start with ``#`` are comments. An empty current or voltage, or ``NaN`` or
         ``NA``, is a missing sample and stays NaN.
 
+        Or an archive of NumPy arrays whose name ends in ``.npz``, with arrays of those names, all
+        of one length. A single number ``step_ms`` or ``step_s`` may stand in place of the times.
+
     Returns
     -------
     Recording
@@ -74,116 +57,50 @@ def read_recording(path: str | Path) -> Recording:
     Raises
     ------
     InputError
-        If the file is no such table; the message names the row and column.
+        If the file is no such table; the message names the row and column, or the array and the
+        sample in it, counted from 0.
     """
     path = Path(path)
-    table = open_table(path)
-    columns = _columns(table)
-    numbers = parse_numbers(table)
-    values = {name: numbers[column.header] for name, column in columns.items()}
-    for name, column in columns.items():
-        _refuse_values(table, name, column, values[name])
-    starts = _sweep_starts(table, values.get("sweep"))
-    grid = _Grid.measure(table, columns["time"], values, starts)
-    sweeps = _build_sweeps(table, columns, values, grid)
+    table = read_npz(path) if path.suffix == ".npz" else _text_table(path)
+    refuse_values(table)
+    grid = _Grid.measure(table, _sweep_starts(table))
     return Recording(
         name=recording_name(path),
-        step_ms=grid.step * columns["time"].factor,
-        sweeps=sweeps,
+        step_ms=grid.step_ms,
+        sweeps=_build_sweeps(table, grid),
         path=path,
         sha256=table.sha256,
-        spikes_from=SPIKES_FROM_FILE if "spike" in columns else "",
+        spikes_from=SPIKES_FROM_FILE if "spike" in table.columns else "",
     )
 
 
-def _columns(table: TextTable) -> dict[str, _Column]:
-    """Tell which quantity each column holds; refuse unknown, repeated and missing ones."""
-    place = f"{table.path}, row {table.header_row}"
-    columns: dict[str, _Column] = {}
-    for header in table.header:
-        if header in ("spike", "sweep"):
-            quantity, factor = header, 1.0
-        else:
-            try:
-                parsed = parse_header(header)
-            except InputError as error:
-                raise InputError(f"{place}: {error}; correct the header") from None
-            if parsed is None:
-                raise InputError(
-                    f"{place}: column {header!r} is unknown; expected {', '.join(_KNOWN)}"
-                    f"{nearest(header, _KNOWN)} (rename or delete the column)"
-                )
-            quantity, factor = parsed
-        if quantity in columns:
-            raise InputError(
-                f"{place}: columns {columns[quantity].header!r} and {header!r} both hold the "
-                f"{quantity}; keep one of the two"
-            )
-        columns[quantity] = _Column(header, factor)
-    for quantity in _REQUIRED:
-        if quantity not in columns:
-            wanted = " or ".join(f"{quantity}_{unit}" for unit in UNIT_FACTORS[quantity])
-            raise InputError(
-                f"{place}: no column holds the {quantity}; found {', '.join(table.header)}; "
-                f"expected {wanted}; add the column"
-            )
-    return columns
+def _text_table(path: Path) -> NumberTable:
+    """Read the columns of a comma-separated file."""
+    table = open_table(path)
+    found = identify(table.header, f"{path}, row {table.header_row}", TEXT)
+    numbers = parse_numbers(table)
+    columns = {
+        quantity: Column(header, factor, numbers[header])
+        for quantity, (header, factor) in found.items()
+    }
+    return NumberTable(path, table.sha256, columns, table.first_row, TEXT)
 
 
-def _refuse_values(table: TextTable, quantity: str, column: _Column, values: FloatArray) -> None:
-    """Raise for the first value that the quantity cannot have."""
-
-    def refuse(wrong: NDArray[np.bool_], expected: str) -> None:
-        if wrong.any():
-            index = int(np.argmax(wrong))
-            found = "an empty field" if np.isnan(values[index]) else f"{values[index]:.10g}"
-            raise InputError(
-                f"{table.path}, row {table.first_row + index}, column {column.header}: found "
-                f"{found}; expected {expected}"
-            )
-
-    if quantity not in _MAY_BE_MISSING:
-        refuse(np.isnan(values), "a number; fill it in or delete the row")
-    if quantity == "spike":
-        refuse((values != 0) & (values != 1), "0 or 1 (1 in the sample of a spike)")
-    elif quantity == "sweep":
-        refuse(
-            (values != np.rint(values)) | (values < 0) | (values > 1e9),
-            "a whole number from 0; number the sweeps 0, 1, 2, …",
-        )
-    elif quantity == "voltage":
-        refuse(
-            np.abs(values) * column.factor > MAX_VOLTAGE_MV,
-            f"at most {MAX_VOLTAGE_MV:g} mV either side of 0; the unit in the header is probably "
-            "wrong (voltage_mV or voltage_V)",
-        )
-        small = np.nanmax(np.abs(values), initial=0.0) * column.factor < MIN_VOLTAGE_MV
-        refuse(
-            np.isfinite(values) & small,
-            f"values beyond {MIN_VOLTAGE_MV:g} mV somewhere in the file; the unit in the header "
-            "is probably wrong (voltage_mV or voltage_V)",
-        )
-    elif quantity == "current":
-        refuse(
-            np.abs(values) * column.factor > MAX_CURRENT_NA,
-            f"at most {MAX_CURRENT_NA:g} nA either side of 0; the unit in the header is probably "
-            "wrong (current_pA or current_nA)",
-        )
-
-
-def _sweep_starts(table: TextTable, numbers: FloatArray | None) -> IntArray:
+def _sweep_starts(table: NumberTable) -> IntArray:
     """Return the index of the first sample of each sweep, shape (n_sweeps,)."""
-    if numbers is None:
+    if "sweep" not in table.columns:
         return np.zeros(1, dtype=np.int64)
+    numbers = table.columns["sweep"].values
     starts: IntArray = np.concatenate([[0], np.flatnonzero(np.diff(numbers)) + 1]).astype(np.int64)
     seen: set[float] = set()
     for start in starts:
         number = float(numbers[start])
         if number in seen:
+            words = table.wording
             raise InputError(
-                f"{table.path}, row {table.first_row + start}, column sweep: sweep {number:.10g} "
-                "comes back after another sweep; expected the rows of a sweep to stand together; "
-                "sort the rows or give the later part a number of its own"
+                f"{table.place('sweep', start)}: sweep {number:.10g} comes back after another "
+                f"sweep; expected the {words.row}s of a sweep to stand together; sort the "
+                f"{words.row}s or give the later part a number of its own"
             )
         seen.add(number)
     return starts
@@ -191,117 +108,154 @@ def _sweep_starts(table: TextTable, numbers: FloatArray | None) -> IntArray:
 
 @dataclass(frozen=True, eq=False)
 class _Grid:
-    """The sweeps' place in the file and their common step, in the unit of the time column."""
+    """The sweeps' place in the file and their common step.
+
+    `step` and `resolution` are in the unit of the time column, or in ms without one.
+    """
 
     edges: IntArray
     step: float
-    resolution: float
+    step_ms: float
+    resolution: float = 0.0
 
     @classmethod
-    def measure(
-        cls, table: TextTable, column: _Column, values: dict[str, FloatArray], starts: IntArray
-    ) -> _Grid:
+    def measure(cls, table: NumberTable, starts: IntArray) -> _Grid:
         """Measure the step; refuse a sweep that has none or another than the rest."""
-        times = values["time"]
-        edges = np.concatenate([starts, [len(times)]])
-        resolution = timegrid.print_resolution(times)
+        edges = np.concatenate([starts, [table.n_samples]])
+        _refuse_single_samples(table, edges)
+        if table.step_ms is not None:
+            return cls(edges, table.step_ms, table.step_ms)
+        column = table.columns["time"]
+        times, row = column.values, table.wording.row
+        resolution = max(timegrid.print_resolution(times), _spacing(column))
         estimates = []
         for first, end in pairwise(edges):
-            place = f"{table.path}, row {table.first_row + first}, column {column.header}"
-            name = _sweep_name(values, first)
-            if end - first < 2:
-                raise InputError(
-                    f"{place}: {name} has one row; expected at least two; delete it or complete it"
-                )
             estimate = timegrid.estimate_step(times[first:end], resolution)
             if estimate.step <= 0:
                 raise InputError(
-                    f"{place}: time does not advance in {name} (median step "
-                    f"{estimate.step:.10g}); expected times that increase from row to row; print "
-                    "them with more decimals, or give each sweep a number in a sweep column"
+                    f"{table.place('time', first)}: time does not advance in "
+                    f"{_sweep_name(table, first)} (median step {estimate.step:.10g}); expected "
+                    f"times that increase from {row} to {row}; write them with more decimals, or "
+                    f"number the sweeps in "
+                    f"the {table.wording.column} sweep"
                 )
             estimates.append(estimate)
         step, odd = timegrid.common_step(estimates, resolution)
-        place = f"{table.path}, column {column.header}"
+        place = f"{table.path}, {table.column('time')}"
         if odd is not None:
             raise InputError(
-                f"{place}: {_sweep_name(values, edges[odd])}, from row "
-                f"{table.first_row + edges[odd]}, has a step of {estimates[odd].step:.6g}; "
-                f"expected {step:.6g} as in the longest sweep; put sweeps of another step in a "
-                "file of their own"
+                f"{place}: {_sweep_name(table, edges[odd])}, from {table.row(edges[odd])}, has a "
+                f"step of {estimates[odd].step:.6g}; expected {step:.6g} as in the longest sweep; "
+                "put sweeps of another step in a file of their own"
             )
         if resolution > 2 * step * (1 + 1e-6):
             raise InputError(
                 f"{place}: times are printed to {resolution:g} and the step is {step:.6g}; "
-                "expected enough decimals to tell rows apart; write the times with more decimals"
+                f"expected enough decimals to tell {row}s apart; write the times with more decimals"
             )
-        return cls(edges, step, resolution)
+        return cls(edges, step, step * column.factor, resolution)
 
 
-def _sweep_name(values: dict[str, FloatArray], index: int) -> str:
+def _refuse_single_samples(table: NumberTable, edges: IntArray) -> None:
+    """Raise for the first sweep that has no step because it has one sample."""
+    short = np.flatnonzero(np.diff(edges) < 2)
+    if len(short):
+        first = int(edges[short[0]])
+        quantity = "time" if "time" in table.columns else "voltage"
+        raise InputError(
+            f"{table.place(quantity, first)}: {_sweep_name(table, first)} has one "
+            f"{table.wording.row}; expected at least two; delete it or complete it"
+        )
+
+
+def _spacing(column: Column) -> float:
+    """Distance of neighbouring numbers where times are stored in a short type, else 0.
+
+    Single precision tells times of 1000 s apart only to 0.06 ms.
+    """
+    stored = column.stored
+    if stored is None or stored.kind != "f" or stored.itemsize >= 8:
+        return 0.0
+    return float(np.spacing(np.abs(column.values).max().astype(stored)))
+
+
+def _sweep_name(table: NumberTable, index: int) -> str:
     """Return what a message calls the sweep of a sample."""
-    return f"sweep {values['sweep'][index]:.10g}" if "sweep" in values else "the recording"
+    if "sweep" not in table.columns:
+        return "the recording"
+    return f"sweep {table.columns['sweep'].values[index]:.10g}"
 
 
-def _build_sweeps(
-    table: TextTable, columns: dict[str, _Column], values: dict[str, FloatArray], grid: _Grid
-) -> tuple[Sweep, ...]:
+def _build_sweeps(table: NumberTable, grid: _Grid) -> tuple[Sweep, ...]:
     """Cut the columns into sweeps in the package's units."""
-    current = values["current"] * columns["current"].factor
-    voltage = values["voltage"] * columns["voltage"].factor
-    clock = _clock(table, columns, values, grid)
-    factor = columns["time"].factor
+    current, voltage = _in_unit(table.columns["current"]), _in_unit(table.columns["voltage"])
+    clock = _clock(table, grid)
     sweeps = []
     for index, (first, end) in enumerate(pairwise(grid.edges)):
         part = slice(first, end)
-        times = values["time"][part]
-        jumps = timegrid.find_jumps(times, grid.step, grid.resolution)
-        first_row = int(table.first_row + first)
+        jumps, jitter_ms = _times(table, grid, part)
+        number, spikes = table.columns.get("sweep"), table.columns.get("spike")
         sweeps.append(
             Sweep(
-                number=int(values["sweep"][first]) if "sweep" in values else 0,
+                number=int(number.values[first]) if number is not None else 0,
                 current=_locked(current[part]),
                 voltage=_locked(voltage[part]),
                 keep=np.ones(end - first, dtype=np.bool_),
-                spikes=np.flatnonzero(values["spike"][part]) if "spike" in values else None,
-                first_row=first_row,
+                spikes=np.flatnonzero(spikes.values[part]) if spikes is not None else None,
+                first_row=int(table.first_row + first),
                 start_s=None if clock is None else float(clock[index]),
-                jumps=tuple(
-                    TimeJump(
-                        row=first_row + int(jump),
-                        sample=int(jump),
-                        before_ms=float(times[jump - 1]) * factor,
-                        after_ms=float(times[jump]) * factor,
-                    )
-                    for jump in jumps
-                ),
-                jitter_ms=timegrid.jitter(times, grid.step, jumps) * factor,
+                jumps=jumps,
+                jitter_ms=jitter_ms,
             )
         )
     return tuple(sweeps)
 
 
-def _clock(
-    table: TextTable, columns: dict[str, _Column], values: dict[str, FloatArray], grid: _Grid
-) -> FloatArray | None:
+def _times(table: NumberTable, grid: _Grid, part: slice) -> tuple[tuple[TimeJump, ...], float]:
+    """Find the jumps in the times of a sweep and their jitter in ms; none where no times are."""
+    if "time" not in table.columns:
+        return (), 0.0
+    column = table.columns["time"]
+    times, factor = column.values[part], column.factor
+    found = timegrid.find_jumps(times, grid.step, grid.resolution)
+    jumps = tuple(
+        TimeJump(
+            row=int(table.first_row + part.start + jump),
+            sample=int(jump),
+            before_ms=float(times[jump - 1]) * factor,
+            after_ms=float(times[jump]) * factor,
+        )
+        for jump in found
+    )
+    return jumps, timegrid.jitter(times, grid.step, found) * factor
+
+
+def _clock(table: NumberTable, grid: _Grid) -> FloatArray | None:
     """Return the start of each sweep in s, shape (n_sweeps,); None where nothing states it."""
     first, end = grid.edges[:-1], grid.edges[1:]
-    if "sweep_start" in columns:
-        column, starts = columns["sweep_start"], values["sweep_start"]
+    if "sweep_start" in table.columns:
+        starts = table.columns["sweep_start"].values
         # A change of start is only allowed where a new sweep begins.
         changes = np.setdiff1d(np.flatnonzero(np.diff(starts)) + 1, first)
         if len(changes):
-            index = changes[0]
+            index = int(changes[0])
             raise InputError(
-                f"{table.path}, row {table.first_row + index}, column {column.header}: found "
-                f"{starts[index]:.10g} after {starts[index - 1]:.10g} in one sweep; expected one "
-                "start a sweep; number the sweeps in the sweep column"
+                f"{table.place('sweep_start', index)}: found {starts[index]:.10g} after "
+                f"{starts[index - 1]:.10g} in one sweep; expected one start a sweep; number the "
+                f"sweeps in the {table.wording.column} sweep"
             )
-        return starts[first] * column.factor
-    times = values["time"]
+        return starts[first] * table.columns["sweep_start"].factor
+    if "time" not in table.columns:
+        return None
+    times = table.columns["time"].values
     runs_on = len(first) > 1 and bool(np.all(times[first[1:]] > times[end[:-1] - 1]))
     # Times are in ms after the factor; starts are in s.
-    return times[first] * columns["time"].factor / 1e3 if runs_on else None
+    return times[first] * table.columns["time"].factor / 1e3 if runs_on else None
+
+
+def _in_unit(column: Column) -> FloatArray:
+    """Values in the package's unit; what has it already is not copied, so that it stays mapped."""
+    return column.values if column.factor == 1 else column.values * column.factor
 
 
 def _locked(values: FloatArray) -> FloatArray:

@@ -28,7 +28,7 @@ class TimeJump:
     Attributes
     ----------
     row
-        Line of the file, counted from 1 with the header as line 1.
+        Line of the file, counted from 1 with the header as line 1; of arrays the index from 0.
     sample
         Index of the first sample after the jump, within its sweep.
     before_ms, after_ms
@@ -50,9 +50,9 @@ class Sweep:
     number
         The sweep's number in the file; 0 where the file has no sweep column.
     current
-        Injected current, nA, shape (n,).
+        Injected current, nA, float64, shape (n,).
     voltage
-        Membrane voltage, mV, shape (n,); NaN where the file has an empty field.
+        Membrane voltage, mV, float64, shape (n,); NaN where the file has an empty field.
     spikes
         Indices of the bins that hold a spike, sorted, shape (n_spikes,); None where spikes
         are neither given nor yet detected.
@@ -60,13 +60,16 @@ class Sweep:
         True where the sample may be used as data, shape (n,). The current of a sample that is
         left out still acts on the voltage after it.
     first_row
-        Line of the file that holds the first sample.
+        Line of the file that holds the first sample; of arrays its index from 0.
     start_s
         Start of the sweep on the recording's clock in s; None where not given.
     jumps
         Places where time does not advance by one step.
     jitter_ms
         Largest deviation of the time column from the regular grid.
+    joined
+        Number and first sample of each of the file's sweeps that were joined to this one; empty
+        for a sweep as it stands in the file.
     """
 
     number: int
@@ -78,6 +81,7 @@ class Sweep:
     start_s: float | None = None
     jumps: tuple[TimeJump, ...] = ()
     jitter_ms: float = 0.0
+    joined: tuple[tuple[int, int], ...] = ()
 
     def __post_init__(self) -> None:
         n = len(self.current)
@@ -99,6 +103,23 @@ class Sweep:
     def n_samples(self) -> int:
         """Number of samples."""
         return len(self.current)
+
+    @property
+    def numbers(self) -> tuple[int, ...]:
+        """Numbers in the file of the sweeps that it is made of, for selections."""
+        return tuple(number for number, _ in self.joined) or (self.number,)
+
+    @property
+    def last_number(self) -> int | None:
+        """Number of the last of the sweeps that were joined; None where none were."""
+        return self.joined[-1][0] if self.joined else None
+
+    @property
+    def label(self) -> str:
+        """The sweep in words, such as ``sweep 3`` or ``sweeps 3–13``."""
+        if self.last_number is None:
+            return f"sweep {self.number}"
+        return f"sweeps {self.number}–{self.last_number}"
 
 
 @dataclass(frozen=True, eq=False)
@@ -141,6 +162,11 @@ class Recording:
     def source(self) -> str:
         """The file's path, or the recording's name where it was made in memory."""
         return str(self.path) if self.path is not None else self.name
+
+    def place(self, row: int) -> str:
+        """Name a row as the file counts it: ``row 12`` of a text, ``sample 12`` of arrays."""
+        arrays = self.path is not None and self.path.suffix == ".npz"
+        return f"{'sample' if arrays else 'row'} {row}"
 
     @property
     def n_spikes(self) -> int:

@@ -182,10 +182,10 @@ def refuse_defects(recording: Recording) -> None:
     if faulty:
         _, (row, words) = faulty[0]
         more = f" (and {len(faulty) - 1} more sweeps with defects)" if len(faulty) > 1 else ""
-        sound = [sweep.number for sweep, defect in defects if defect is None]
+        sound = [n for sweep, defect in defects if defect is None for n in sweep.numbers]
         raise InputError(
-            f"{recording.source}, row {row}: {words}{more}; a fit needs every value in its place; "
-            f"{_mend(recording, sound)}"
+            f"{recording.source}, {recording.place(row)}: {words}{more}; a fit needs every value "
+            f"in its place; {_mend(recording, sound)}"
         )
     low = min(float(sweep.current.min()) for sweep in recording.sweeps)
     high = max(float(sweep.current.max()) for sweep in recording.sweeps)
@@ -201,8 +201,7 @@ def _defect(sweep: Sweep) -> tuple[int, str] | None:
     if sweep.jumps:
         jump = sweep.jumps[0]
         return jump.row, (
-            f"time jumps from {jump.before_ms:.10g} to {jump.after_ms:.10g} ms in sweep "
-            f"{sweep.number}"
+            f"time jumps from {jump.before_ms:.10g} to {jump.after_ms:.10g} ms in {sweep.label}"
         )
     for name, missing in (
         ("current", np.isnan(sweep.current)),
@@ -212,7 +211,7 @@ def _defect(sweep: Sweep) -> tuple[int, str] | None:
             first, length = _first_run(missing)
             rows = "row" if length == 1 else "rows"
             return sweep.first_row + first, (
-                f"{name} is missing in {length} {rows} of sweep {sweep.number}"
+                f"{name} is missing in {length} {rows} of {sweep.label}"
             )
     return None
 

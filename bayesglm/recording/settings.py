@@ -10,6 +10,9 @@ from typing import Literal
 
 from pydantic import BaseModel, ConfigDict, Field, model_validator
 
+#: What a kernel is made of.
+Basis = Literal["splines", "cosines", "lags", "exponentials"]
+
 
 class Section(BaseModel):
     """A section of the study file: immutable, and closed to unknown keys."""
@@ -77,6 +80,11 @@ class RecordingSection(Section):
         default=None, description="blockers in the bath, in words"
     )
     internal_solution: str | None = Field(default=None, description="pipette solution, in words")
+    contiguous: tuple[str, ...] = Field(
+        default=(),
+        description='numbers of sweeps that follow on each other without a gap, such as ["3-13"], '
+        "where the file does not state their starts; holds for every file of the study",
+    )
     spike_height_mV: float = Field(
         default=-10.0, description="a spike's peak exceeds this voltage, mV"
     )
@@ -97,17 +105,35 @@ class RecordingSection(Section):
 
 
 class KernelSection(Section):
-    """Shape of a kernel: its duration and the B-splines it is made of."""
+    """Shape of a kernel: its duration and what it is made of."""
 
     duration_ms: float | None = Field(
         default=None, gt=0, description="duration of the kernel, ms; default from the data"
     )
-    weights: int = Field(default=14, ge=5, le=60, description="number of B-spline weights")
+    basis: Basis = Field(
+        default="splines",
+        description="B-splines, raised cosines, one coefficient a lag (or bin of lags), or a sum "
+        "of exponentials whose time constants are fitted too",
+    )
+    weights: int | None = Field(
+        default=None,
+        ge=5,
+        le=400,
+        description="number of weights; default 14 splines (which carry exponentials too) or "
+        "cosines, 60 bins of lags (at most one a row); up to 60, of lags up to 400",
+    )
     warp_ms: float = Field(
         default=2.0,
         gt=0,
         description="knots are even in log(1 + lag/warp_ms): smaller is finer early",
     )
+    terms: int = Field(default=3, ge=1, le=6, description="number of exponentials")
+
+    @model_validator(mode="after")
+    def _weights_suit_the_basis(self) -> KernelSection:
+        if self.weights is not None and self.weights > 60 and self.basis != "lags":
+            raise ValueError(f"weights is {self.weights}; expected at most 60 {self.basis}")
+        return self
 
 
 class AfterSpikeSection(KernelSection):
@@ -124,6 +150,21 @@ class ElectrodeSection(Section):
     include: bool = Field(
         default=True, description="fit a term in the current of the same bin (unbalanced bridge)"
     )
+    duration_ms: float = Field(
+        default=0.0,
+        ge=0,
+        lt=1,
+        description="and a kernel of up to four bins of lags up to here, ms, for an electrode that "
+        "charges; 0 for none",
+    )
+
+    @model_validator(mode="after")
+    def _kernel_needs_the_term(self) -> ElectrodeSection:
+        if self.duration_ms and not self.include:
+            raise ValueError(
+                f"duration_ms is {self.duration_ms:g} where include is false; expected 0"
+            )
+        return self
 
 
 class KernelsSection(Section):
@@ -159,7 +200,18 @@ class ModelSection(Section):
         description="leave out the first input kernel's length of each sweep that does not begin "
         "with 20 ms of constant current: what drove the cell before it is unknown",
     )
+    duration_grid: bool = Field(
+        default=True,
+        description="fit other durations of the kernels too, and say how much rests on them",
+    )
+    window_sensitivity: bool = Field(
+        default=True, description="fit other ends of the spike window too, and say the same"
+    )
     sweep_offsets: bool = Field(default=True, description="each sweep has an offset of its own")
+    sweep_drift: bool = Field(
+        default=True,
+        description="each sweep drifts along a straight line of its own; only with sweep_offsets",
+    )
     units: Literal["auto", "sweep", "block"] = Field(
         default="auto", description="what counts as an independent unit"
     )

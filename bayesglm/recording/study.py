@@ -135,7 +135,9 @@ def load(
     """
     given = [Path(path) for path in paths]
     if not given:
-        raise InputError("nothing to read; name a study.toml, its folder, or recordings (.csv)")
+        raise InputError(
+            "nothing to read; name a study.toml, its folder, or recordings (.csv, .npz)"
+        )
     studies = [path for path in given if path.suffix == ".toml" or path.is_dir()]
     if studies and len(given) > 1:
         raise InputError(
@@ -330,7 +332,7 @@ def _recording_entry(row: ListingRow) -> RecordingEntry:
 def _refuse_missing(path: Path, place: str) -> None:
     """Raise unless a recording is a file that exists."""
     if path.is_dir():
-        raise InputError(f"{place}: {path} is a folder; expected a recording (.csv, .csv.gz)")
+        raise InputError(f"{place}: {path} is a folder; expected a recording (.csv, .csv.gz, .npz)")
     if not path.is_file():
         folder = path.parent
         names = [item.name for item in folder.iterdir()] if folder.is_dir() else []

@@ -83,7 +83,8 @@ def open_table(path: Path, example: str = "time_ms,current_pA,voltage_mV") -> Te
     InputError
         If the file is missing, empty, no text, or has no row below its header.
     """
-    raw = _read_bytes(path)
+    with open_bytes(path) as stream:
+        raw = stream.read()
     text = _as_text(path, _unpack(path, raw))
     row = 1
     while text.startswith(b"#"):
@@ -153,19 +154,26 @@ def parse_numbers(table: TextTable) -> dict[str, FloatArray]:
     return columns
 
 
-def _read_bytes(path: Path) -> bytes:
-    """Return the bytes of a file that is there, is a file and holds something."""
+def open_bytes(path: Path) -> io.BufferedReader:
+    """Open a file that is there, is a file and holds something.
+
+    Raises
+    ------
+    InputError
+        If it is not.
+    """
     if path.is_dir():
-        raise InputError(f"{path}: found a folder; expected a file (.csv, .csv.gz)")
+        raise InputError(f"{path}: found a folder; expected a file (.csv, .csv.gz, .npz)")
     try:
-        raw = path.read_bytes()
+        stream = path.open("rb")
     except FileNotFoundError:
         raise InputError(f"{path}: no such file; check the name and the folder") from None
     except OSError as error:
         raise InputError(f"{path}: cannot be read ({error.strerror}); check its rights") from None
-    if not raw:
-        raise InputError(f"{path}: the file is empty; expected a header and rows below it")
-    return raw
+    if not stream.peek(1):
+        stream.close()
+        raise InputError(f"{path}: the file is empty; copy or export it again")
+    return stream
 
 
 def _unpack(path: Path, raw: bytes) -> bytes:
@@ -189,7 +197,8 @@ def _as_text(path: Path, data: bytes) -> bytes:
     """Return UTF-8 text with line feeds only and without a byte order mark."""
     if data.startswith(b"PK\x03\x04"):
         raise InputError(
-            f"{path}: found a zip archive or a workbook; save it as comma-separated text (.csv)"
+            f"{path}: found a zip archive or a workbook; save it as comma-separated text (.csv), "
+            "or arrays as .npz"
         )
     if data.startswith((b"\xff\xfe", b"\xfe\xff")):
         raise InputError(f"{path}: the text is UTF-16; save it as UTF-8")

@@ -7,6 +7,7 @@ import shlex
 from collections.abc import Sequence
 from typing import Any
 
+from bayesglm.recording.ranges import format_sweeps
 from bayesglm.recording.recording import Recording
 from bayesglm.recording.settings import Settings
 
@@ -79,6 +80,12 @@ def _quoted(words: Sequence[str]) -> str:
         f"'{word}'" if word.partition("=")[2] and "'" not in word else shlex.quote(word)
         for word in words
     )
+
+
+def sweeps_in_words(numbers: Sequence[int]) -> str:
+    """Name sweeps by their numbers, such as ``sweep 3`` or ``sweeps 0–4, 7``."""
+    listed = format_sweeps(numbers).replace("-", "–").replace(",", ", ")
+    return f"{'sweep' if len(set(numbers)) == 1 else 'sweeps'} {listed}"
 
 
 def minus(text: str) -> str:

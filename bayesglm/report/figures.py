@@ -8,16 +8,31 @@ from pathlib import Path
 from matplotlib.figure import Figure
 
 from bayesglm.inference.results import CellFit
+from bayesglm.recording.steps import measure_steps
 from bayesglm.report import style
+from bayesglm.report.influence_figures import draw_leave_one_out
 from bayesglm.report.kernel_figures import draw_kernels
 from bayesglm.report.kernel_figures import draw_overview as _overview
 from bayesglm.report.predicted import predict_sweeps
-from bayesglm.report.residual_figures import draw_residuals
+from bayesglm.report.residual_figures import draw_residual_distribution, draw_residuals
+from bayesglm.report.sampler_figures import draw_prior_posterior, draw_trace_rank
+from bayesglm.report.sweep_figures import draw_by_sweep, draw_voltage_current
 from bayesglm.report.trace_figures import draw_prediction, draw_traces, representative_sweeps
 from bayesglm.report.truth import Truth
 
-#: The figures in the order of the page.
-FIGURES = ("kernels", "prediction", "traces", "residuals")
+#: The figures in the order of the page; those that do not apply to a cell are left out.
+FIGURES = (
+    "kernels",
+    "prediction",
+    "traces",
+    "residuals",
+    "voltage_current",
+    "by_sweep",
+    "leave_one_out",
+    "residual_distribution",
+    "prior_posterior",
+    "trace_rank",
+)
 
 
 def draw_figures(
@@ -37,17 +52,27 @@ def draw_figures(
     Returns
     -------
     dict
-        By name, as in `FIGURES`.
+        By name, in the order of `FIGURES`; ``voltage_current`` and ``by_sweep`` only where the
+        recordings have steps, or sweeps, to show.
     """
     chosen = representative_sweeps(fit)
     predicted = predict_sweeps(fit, also=list(chosen))
+    rows = list(predicted.values())
+    measures = [measure_steps(recording) for recording in fit.recordings]
     with style.styled():
-        return {
+        drawn = {
             "kernels": draw_kernels(fit, truth, width_mm),
             "prediction": draw_prediction(predicted, chosen, width_mm),
             "traces": draw_traces(fit, width_mm),
-            "residuals": draw_residuals(fit, list(predicted.values()), width_mm),
+            "residuals": draw_residuals(fit, rows, width_mm),
+            "voltage_current": draw_voltage_current(fit, measures, width_mm),
+            "by_sweep": draw_by_sweep(fit, measures, width_mm),
+            "leave_one_out": draw_leave_one_out(fit, width_mm),
+            "residual_distribution": draw_residual_distribution(fit, rows, width_mm),
+            "prior_posterior": draw_prior_posterior(fit, width_mm),
+            "trace_rank": draw_trace_rank(fit, width_mm),
         }
+    return {name: figure for name, figure in drawn.items() if figure is not None}
 
 
 def save_figures(

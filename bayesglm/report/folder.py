@@ -19,8 +19,8 @@ from bayesglm.report.tables import feature_dict, verdict_dict, write_cell, write
 from bayesglm.report.truth import Truth
 from bayesglm.verdict import worst
 
-#: Calls of `progress` for each cell: the four stages of a fit, and writing.
-STAGES: Final = 5
+#: Calls of `progress` for each cell: the five stages of a fit, and writing.
+STAGES: Final = 6
 
 
 @dataclass(frozen=True, eq=False)

@@ -91,7 +91,7 @@ def draw_overview(fits: Sequence[CellFit], width_mm: float) -> Figure:
                 band.lags_ms, band.lower, band.upper, color=color, alpha=0.12, linewidth=0
             )
             axes.plot(band.lags_ms, band.mean, color=color, linestyle=dashes, linewidth=1.0)
-        _dress(axes, name, max(band.lags_ms[-1] for _, band in bands))
+        dress(axes, name, max(band.lags_ms[-1] for _, band in bands))
     if len(classes) > 1:
         figure.legend(handles=_class_legend(classes), loc="lower center", ncols=4)
     return figure
@@ -110,7 +110,7 @@ def _kernel_panel(axes: Axes, band: Band, split: Split | None, truth: Truth | No
     if truth is not None and band.kernel in truth.curves:
         axes.plot(*_within(truth.curves[band.kernel], lags), **_TRUTH_STYLE)
     axes.set_ylim(_limited(axes.get_ylim(), shown))
-    _dress(axes, band.kernel, lags[-1])
+    dress(axes, band.kernel, lags[-1])
     if handles:
         positive = float(np.nansum(band.mean)) > 0
         axes.legend(
@@ -135,7 +135,18 @@ def _range_curves(axes: Axes, band: Band, split: Split | None) -> list[Line2D]:
     return lines
 
 
-def _dress(axes: Axes, name: str, longest_ms: float) -> None:
+def dress(axes: Axes, name: str, longest_ms: float) -> None:
+    """Give the axes of a kernel their scale, ticks, title and labels.
+
+    Parameters
+    ----------
+    axes
+        Where the kernel is drawn.
+    name
+        ``input`` or ``after_spike``.
+    longest_ms
+        End of the axis of lags, ms.
+    """
     axes.axhline(0.0, color=GREY, linewidth=0.5, zorder=0.5)
     if name == "input":
         # κ falls within the first ms to a fraction of its beginning and lasts for hundreds: as

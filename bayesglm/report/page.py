@@ -101,7 +101,11 @@ def _render(fits: Sequence[CellFit], parts: Sequence[CellPart], title: str, note
 def _figures(fit: CellFit, truth: Truth | None, files: Mapping[str, Path] | None) -> dict[str, str]:
     """Addresses of a cell's figures, each holding the whole figure."""
     if files is not None:
-        texts = {name: files[f"{name}.svg"].read_text(encoding="utf-8") for name in drawing.FIGURES}
+        texts = {
+            name: files[f"{name}.svg"].read_text(encoding="utf-8")
+            for name in drawing.FIGURES
+            if f"{name}.svg" in files
+        }
     else:
         drawn = drawing.draw_figures(fit, truth)
         texts = {name: as_svg(figure) for name, figure in drawn.items()}

@@ -10,6 +10,7 @@ from bayesglm.inference.results import CellFit, Feature
 from bayesglm.models.priors import PriorRow, prior_table
 from bayesglm.report.page_figures import PageFigure, page_figures
 from bayesglm.report.page_method import Fact, Fitted, diagnostics, fitted
+from bayesglm.report.page_sensitivity import ChoiceTable, choice_tables
 from bayesglm.report.truth import Truth
 from bayesglm.report.wording import (
     VERDICTS,
@@ -43,6 +44,8 @@ class FeatureRow:
     protocol: str
     between: str
     truth: str = ""
+    monte_carlo: str = "–"
+    effective_draws: str = "–"
 
 
 @dataclass(frozen=True)
@@ -83,6 +86,7 @@ class CellPart:
     priors: tuple[PriorRow, ...]
     fitted: Fitted
     diagnostics: tuple[Fact, ...]
+    choices: tuple[ChoiceTable, ...]
 
 
 @dataclass(frozen=True)
@@ -136,6 +140,7 @@ def cell_part(
         priors=prior_table(fit.design, fit.settings.priors),
         fitted=fitted(fit),
         diagnostics=diagnostics(fit),
+        choices=choice_tables(fit),
     )
 
 
@@ -189,6 +194,8 @@ def _feature(feature: Feature, truth: float | None) -> FeatureRow:
         protocol=protocol if has_interval else "–",
         between=rounded(feature.between_range_sd, places) if has_interval else "–",
         truth=_held_against(feature, truth, places) if truth is not None and has_interval else "",
+        monte_carlo=rounded(feature.mcse_mean, places + 1),
+        effective_draws=rounded(feature.ess_bulk, 0),
     )
 
 

@@ -8,6 +8,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from bayesglm.inference.results import CellFit
+from bayesglm.kernels.basis import KernelSpec
+from bayesglm.kernels.design import VoltageDesign
 from bayesglm.recording.recording import Recording
 from bayesglm.recording.settings import RecordingSection
 from bayesglm.recording.wording import minus
@@ -94,7 +96,7 @@ def _recording(recording: Recording) -> FittedRecording:
     return FittedRecording(
         name=recording.path.name if recording.path is not None else recording.name,
         sha256=recording.sha256[:_SHORT_HASH] or "–",
-        sweeps=str(len(recording.sweeps)),
+        sweeps=_sweeps(recording),
         duration=f"{recording.seconds:.1f} s",
         step=f"{recording.step_ms:g} ms",
         spikes=f"{recording.n_spikes}{how}",
@@ -102,13 +104,20 @@ def _recording(recording: Recording) -> FittedRecording:
     )
 
 
+def _sweeps(recording: Recording) -> str:
+    """Number of sweeps, and which of the file's were joined to one."""
+    joined = [sweep.label.partition(" ")[2] for sweep in recording.sweeps if sweep.joined]
+    n = len(recording.sweeps)
+    return f"{n} (joined: {', '.join(joined)})" if joined else str(n)
+
+
 def _model(fit: CellFit) -> tuple[Fact, ...]:
     design, settings = fit.design, fit.settings
     facts = [
         Fact(
             f"Kernel {_SIGNS[name]}",
-            f"{spec.duration_ms:g} ms, {spec.weights} weights",
-            f"B-splines, knots even in log(1 + lag/{spec.warp_ms:g} ms)",
+            f"{spec.duration_ms:g} ms, {_size(spec)}",
+            _basis(spec),
         )
         for name, spec in design.kernels.items()
     ]
@@ -116,12 +125,42 @@ def _model(fit: CellFit) -> tuple[Fact, ...]:
     electrode = "fitted" if design.electrode else "not fitted"
     facts += [
         Fact("Electrode term", electrode, "takes up an unbalanced bridge; no part of κ"),
+        *_electrode_kernel(design),
         Fact("Rows", f"{design.row_ms:g} ms", "voltage is averaged over rows"),
         Fact("Spike window", minus(f"{before:g} to {after:g} ms"), "left out around each spike"),
         Fact("Sweep offsets", "yes" if settings.model.sweep_offsets else "no"),
         Fact("Noise", settings.model.noise),
     ]
     return tuple(facts)
+
+
+def _size(spec: KernelSpec) -> str:
+    """Number of what a kernel is made of."""
+    if spec.basis == "exponentials":
+        return f"{spec.terms} exponential{'s' if spec.terms > 1 else ''}"
+    return f"{spec.weights} weights"
+
+
+def _basis(spec: KernelSpec) -> str:
+    """What a kernel is made of, in words."""
+    axis = f"log(1 + lag/{spec.warp_ms:g} ms)"
+    if spec.basis == "lags":
+        if spec.weights == spec.finest_lags:
+            return f"one coefficient for each {spec.finest_ms:g} ms of lag"
+        return f"bins of lags, at least {spec.finest_ms:g} ms wide, even in {axis}"
+    return {
+        "splines": f"B-splines, knots even in {axis}",
+        "cosines": f"raised cosines, even in {axis}",
+        "exponentials": f"time constants fitted; carried by {spec.weights} B-splines",
+    }[spec.basis]
+
+
+def _electrode_kernel(design: VoltageDesign) -> list[Fact]:
+    bins = design.electrode_kernel
+    if bins is None:
+        return []
+    value = f"{bins.duration_ms:g} ms, {bins.weights} bin{'s' if bins.weights > 1 else ''} of lags"
+    return [Fact("Electrode kernel", value, "an electrode that charges; part of the term")]
 
 
 def _units(fit: CellFit) -> str:
@@ -138,6 +177,8 @@ def _stated(section: RecordingSection) -> tuple[tuple[Fact, ...], tuple[Fact, ..
     for key, field in RecordingSection.model_fields.items():
         # How spikes are found is told beside the recordings.
         if key == "select" or key.startswith("spike_"):
+            continue
+        if key == "contiguous" and not section.contiguous:
             continue
         value = getattr(section, key)
         what = (field.description or key).split("; ")[0]
@@ -159,4 +200,6 @@ def _written(value: object) -> str:
         return "yes" if value else "no"
     if isinstance(value, float) and math.isfinite(value):
         return minus(f"{value:g}")
+    if isinstance(value, tuple):
+        return ", ".join(map(str, value))
     return str(value)

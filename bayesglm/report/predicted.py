@@ -16,6 +16,7 @@ from scipy import fft
 from bayesglm.checks.residuals import SweepRows, sweep_rows
 from bayesglm.inference.results import CellFit
 from bayesglm.recording.recording import FloatArray, Recording, Sweep
+from bayesglm.recording.settings import ModelSection
 
 #: Index of a recording in the fit, and of a sweep in the recording.
 Place = tuple[int, int]
@@ -87,19 +88,38 @@ def mean_current_nA(recording: Recording, number: int) -> float:
     return float(recording.sweeps[number].current.mean())
 
 
-def residual_autocorrelation(
-    sweeps: Sequence[SweepRows], row_ms: float, offsets: bool, longest_ms: float
-) -> tuple[FloatArray, FloatArray]:
-    """Autocorrelation of the residual, averaged over all pairs of fitted rows of all sweeps.
+def centred_residuals(sweeps: Sequence[SweepRows], model: ModelSection) -> list[FloatArray]:
+    """Residual of each sweep less what the model gives the sweep as its own.
 
     Parameters
     ----------
     sweeps
         The predicted sweeps.
+    model
+        Says whether sweeps have offsets, and drifts.
+
+    Returns
+    -------
+    list of arrays
+        mV, NaN where a row was not fitted; sweeps without fitted rows are passed over.
+    """
+    fitted = [rows for rows in sweeps if rows.kept.any()]
+    if not model.sweep_offsets:
+        return [rows.residual for rows in fitted]
+    return [rows.centred(model.sweep_drift) for rows in fitted]
+
+
+def residual_autocorrelation(
+    residuals: Sequence[FloatArray], row_ms: float, longest_ms: float
+) -> tuple[FloatArray, FloatArray]:
+    """Autocorrelation of the residual, averaged over all pairs of fitted rows of all sweeps.
+
+    Parameters
+    ----------
+    residuals
+        Residual of each sweep, shape (n_rows,) each, NaN where a row was not fitted; about zero.
     row_ms
         Length of a row, ms.
-    offsets
-        Whether each sweep has an offset of its own, which is taken out first.
     longest_ms
         Longest lag, ms.
 
@@ -108,15 +128,13 @@ def residual_autocorrelation(
     (lags in ms, autocorrelation)
         From lag 0 to the longest that half of the longest sweep allows, shape (n,).
     """
-    longest = max(len(sweep.kept) for sweep in sweeps)
+    longest = max(len(residual) for residual in residuals)
     n_lags = max(2, min(round(longest_ms / row_ms) + 1, longest // 2))
     products, pairs = np.zeros(n_lags), np.zeros(n_lags)
-    for sweep in sweeps:
-        kept = sweep.kept
-        if kept.any():
-            offset = sweep.residual[kept].mean() if offsets else 0.0
-            products += _lagged(np.where(kept, sweep.residual - offset, 0.0), n_lags)
-            pairs += _lagged(kept.astype(np.float64), n_lags)
+    for residual in residuals:
+        kept = np.isfinite(residual)
+        products += _lagged(np.where(kept, residual, 0.0), n_lags)
+        pairs += _lagged(kept.astype(np.float64), n_lags)
     covariance = np.divide(products, pairs, out=np.zeros(n_lags), where=pairs > 0.5)
     scale = covariance[0] if covariance[0] > 0 else 1.0
     return times_of(n_lags, row_ms), covariance / scale

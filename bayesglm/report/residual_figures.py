@@ -1,4 +1,4 @@
-"""Figure of what is left: how long residuals stay alike, and at which frequencies they lie."""
+"""Figures of what is left: how long residuals stay alike, at which frequencies, and how large."""
 
 from __future__ import annotations
 
@@ -6,17 +6,22 @@ from collections.abc import Sequence
 from typing import Final
 
 import numpy as np
+from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from scipy.stats import norm
 
-from bayesglm.checks.residuals import SweepRows
+from bayesglm.checks.residuals import EVENT_SDS, ResidualMoments, SweepRows, residual_moments
 from bayesglm.inference.results import CellFit
 from bayesglm.likelihood.digest import BAND_EDGES_HZ
 from bayesglm.recording.recording import FloatArray
-from bayesglm.report.predicted import residual_autocorrelation
-from bayesglm.report.style import BLUE, GREY, Margins, label_y, new_figure, panels
+from bayesglm.recording.wording import fixed, number
+from bayesglm.report.predicted import centred_residuals, residual_autocorrelation
+from bayesglm.report.style import BLUE, GREY, INK, Margins, label_y, new_figure, panels
+from bayesglm.report.wording import count
 
 _LONGEST_MS: Final = 500.0
 _WHITE: Final = (0, (1, 1.5))
+_BINS: Final = 80
 
 
 def draw_residuals(fit: CellFit, predicted: Sequence[SweepRows], width_mm: float) -> Figure:
@@ -27,9 +32,8 @@ def draw_residuals(fit: CellFit, predicted: Sequence[SweepRows], width_mm: float
     figure = new_figure(width_mm, height)
     grid = panels(figure, 3 - columns, columns, margins)
     left, right = (stack[0] for line in grid for stack in line)
-    lags, correlation = residual_autocorrelation(
-        predicted, fit.design.row_ms, fit.settings.model.sweep_offsets, _LONGEST_MS
-    )
+    residuals = centred_residuals(predicted, fit.settings.model)
+    lags, correlation = residual_autocorrelation(residuals, fit.design.row_ms, _LONGEST_MS)
     left.plot(lags, correlation, color=BLUE, linewidth=1.2, label="residual")
     left.axhline(0.0, color=GREY, linewidth=0.9, linestyle=_WHITE, label="white noise")
     left.set_xlim(0, lags[-1])
@@ -69,3 +73,65 @@ def residual_spectrum(fit: CellFit) -> tuple[FloatArray, FloatArray, float]:
     filled = density > 0
     white = per_Hz * fit.calibration.fit.residual_variance
     return np.append(edges[0], edges[1:][filled]), density[filled], white
+
+
+def draw_residual_distribution(
+    fit: CellFit, predicted: Sequence[SweepRows], width_mm: float
+) -> Figure:
+    """Draw the histogram of the residual against a normal of its sd, with its moments in words."""
+    residuals = centred_residuals(predicted, fit.settings.model)
+    found = residual_moments(residuals, fit.design.row_ms)
+    wide = width_mm > 120
+    margins = Margins(left=15.0, right=70.0) if wide else Margins(left=15.0, top=27.0, bottom=24.0)
+    figure = new_figure(width_mm, margins.top + margins.bottom + 50.0)
+    axes = panels(figure, 1, 1, margins)[0][0][0]
+    _histogram(axes, np.concatenate(residuals), found)
+    if wide:
+        axes.legend(loc="lower left", bbox_to_anchor=(1.02, 0.0))
+    else:
+        figure.legend(loc="lower center")
+    place = (1.04, 1.0) if wide else (0.0, 1.14)
+    axes.text(
+        *place, "\n".join(moments_in_words(found)), transform=axes.transAxes, linespacing=1.6,
+        verticalalignment="top" if wide else "bottom",
+    )  # fmt: skip
+    return figure
+
+
+def moments_in_words(found: ResidualMoments) -> tuple[str, ...]:
+    """The moments of the residual and the number of its events, in words."""
+    above, below = (
+        f"{count(n, 'event')} ({number(n / max(found.seconds, 1e-9), 2)}/s)"
+        for n in (found.above, found.below)
+    )
+    low, high = (fixed(limit, 1) for limit in found.limits)
+    return (
+        f"sd {number(found.sd, 3)} mV, robust sd {number(found.robust_sd, 3)} mV",
+        f"skewness {fixed(found.skewness, 2)}, excess kurtosis {fixed(found.excess_kurtosis, 1)}",
+        f"above {high} mV: {above}",
+        f"below {low} mV: {below}",
+    )
+
+
+def _histogram(axes: Axes, residual: FloatArray, found: ResidualMoments) -> None:
+    residual = residual[np.isfinite(residual)]
+    density, edges = np.histogram(residual, bins=_BINS, density=True)
+    lowest = 0.5 / (len(residual) * (edges[1] - edges[0]))
+    axes.stairs(
+        np.maximum(density, lowest / 10), edges, baseline=None, color=BLUE, linewidth=1.2,
+        label="residual",
+    )  # fmt: skip
+    x = np.linspace(edges[0], edges[-1], 201)
+    normal = norm.pdf(x, residual.mean(), max(found.sd, 1e-12))
+    axes.plot(x, normal, color=INK, linestyle=(0, (5, 2)), label="normal of the same sd")
+    for limit in found.limits:
+        axes.axvline(
+            limit, color=GREY, linewidth=0.9, linestyle=_WHITE,
+            label=f"{EVENT_SDS:g} robust sd" if limit == found.limits[1] else None,
+        )  # fmt: skip
+    axes.set_yscale("log")
+    axes.set_ylim(lowest, 3 * max(density.max(), normal.max()))
+    axes.set_xlim(edges[0], edges[-1])
+    axes.set_title("Distribution of the residual")
+    axes.set_xlabel("Residual (mV)")
+    label_y(axes, "Density (1/mV)", mm=10.0)

@@ -13,7 +13,7 @@ import json
 import platform
 import shutil
 import tempfile
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import asdict
 from pathlib import Path
@@ -22,6 +22,7 @@ from typing import Any, Final
 import numpy as np
 
 from bayesglm.inference.results import Band, CellFit, Feature, finite_or_none
+from bayesglm.inference.sensitivity import DurationGrid, Sensitivity, SpikeWindows
 from bayesglm.likelihood.digest import content_hash
 
 KERNEL_COLUMNS: Final = (
@@ -33,6 +34,13 @@ FEATURE_COLUMNS: Final = (
     "feature", "unit", "mean", "sd", "lower", "upper", "protocol_lower", "protocol_upper",
     "between_range_sd", "level", "ess_bulk", "mcse_mean",
 )  # fmt: skip
+
+DURATION_COLUMNS: Final = (
+    "input_ms", "after_spike_ms", "chosen", "as_good", "held_out_mV2", "difference_mV2",
+    "difference_se_mV2",
+)  # fmt: skip
+
+WINDOW_COLUMNS: Final = ("window_end_ms", "chosen")
 
 SUMMARY_COLUMNS: Final = ("cell", "condition", "class", "animal", "verdict", "observe")
 
@@ -55,7 +63,7 @@ def write_cell(fit: CellFit, folder: Path) -> Path:
     -------
     Path
         The cell's folder: ``posterior.nc``, ``kernels.csv``, ``features.csv``, ``verdict.json``,
-        ``digest.npz``.
+        ``digest.npz``; ``durations.csv`` and ``spike_window.csv`` where these were varied.
     """
     place = folder / "cells" / fit.name
     with _beside(place) as work:
@@ -64,6 +72,7 @@ def write_cell(fit: CellFit, folder: Path) -> Path:
         _write_csv(work / "features.csv", FEATURE_COLUMNS, _feature_rows(fit.features))
         _write_json(work / "verdict.json", verdict_dict(fit))
         fit.digest.save(work / "digest.npz")
+        _write_sensitivity(fit.sensitivity, work)
     return place
 
 
@@ -133,6 +142,42 @@ def _feature_rows(features: Sequence[Feature]) -> Iterator[Sequence[object]]:
             f.level, f.ess_bulk, f.mcse_mean,
         )  # fmt: skip
         yield (f.name, f.unit, *(_number(value) for value in numbers))
+
+
+def _write_sensitivity(found: Sensitivity, folder: Path) -> None:
+    if found.durations is not None:
+        columns = (*DURATION_COLUMNS, *_moment_columns(found.durations.features))
+        _write_csv(folder / "durations.csv", columns, _duration_rows(found.durations))
+    if found.windows is not None:
+        columns = (*WINDOW_COLUMNS, *_moment_columns(found.windows.features))
+        _write_csv(folder / "spike_window.csv", columns, _window_rows(found.windows))
+
+
+def _moment_columns(features: Iterable[str]) -> list[str]:
+    return [f"{name}_{part}" for name in features for part in ("mean", "sd")]
+
+
+def _duration_rows(grid: DurationGrid) -> Iterator[Sequence[object]]:
+    tables = [grid.held_out_mV2, grid.excess_mV2, grid.held_out_se_mV2]
+    tables += [values for pair in grid.features.values() for values in pair]
+    for i, input_ms in enumerate(grid.input_ms):
+        for j in range(grid.held_out_mV2.shape[1]):
+            yield (
+                _number(input_ms),
+                _number(grid.after_spike_ms[j]) if len(grid.after_spike_ms) else "",
+                int((i, j) == grid.chosen),
+                int(grid.as_good[i, j]),
+                *(_number(float(table[i, j])) for table in tables),
+            )
+
+
+def _window_rows(windows: SpikeWindows) -> Iterator[Sequence[object]]:
+    for index, end in enumerate(windows.ends_ms):
+        yield (
+            _number(end),
+            int(index == windows.chosen),
+            *(_number(values[index]) for pair in windows.features.values() for values in pair),
+        )
 
 
 def _summary_row(fit: CellFit, names: Sequence[str]) -> list[object]:

@@ -144,10 +144,11 @@ def _by_drive(fit: CellFit, at_most: int) -> list[Place]:
 def _sweep_label(fit: CellFit, item: Place) -> str:
     recording = fit.recordings[item[0]]
     sweep = recording.sweeps[item[1]]
-    name = f"{recording.name}, sweep" if len(fit.recordings) > 1 else "Sweep"
+    label = sweep.label
+    name = f"{recording.name}, {label}" if len(fit.recordings) > 1 else label.capitalize()
     count = 0 if sweep.spikes is None else len(sweep.spikes)
     counted = {0: "no spikes", 1: "1 spike"}.get(count, f"{count} spikes")
-    return f"{name} {sweep.number}: {counted}"
+    return f"{name}: {counted}"
 
 
 def _stacked(

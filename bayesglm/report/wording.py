@@ -31,11 +31,13 @@ CAUTION: Final = (
 _FEATURES: Final = {
     "input_resistance": "Input resistance",
     "membrane_time_constant": "Membrane time constant",
+    "input_half_width": "Lag by which κ has reached half of the input resistance",
     "offset": "Offset E: voltage at zero recorded current",
     "electrode_resistance": "Electrode term: response in the same sample",
     "noise_sd": "Sd of the residual",
     "after_spike_minimum": "Minimum of η",
     "after_spike_minimum_time": "Time of the minimum of η",
+    "after_spike_half_width": "Width of η below half of its minimum",
     "after_spike_peak": "Highest η after its minimum",
     "after_spike_peak_time": "Time of the highest η after its minimum",
     "after_spike_peak_probability": (
@@ -49,6 +51,8 @@ _CHECKS: Final = {
     "drive_split": "Ranges of drive",
     "prior_share": "Share of the prior",
     "one_unit_decides": "Weight of one unit",
+    "durations": "Durations of the kernels",
+    "spike_window": "End of the spike window",
 }
 _NEGATIVE: Final = re.compile(r"(?<![\w-])-(?=\d)")
 _AT: Final = "after_spike_at_"

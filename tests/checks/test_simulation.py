@@ -188,3 +188,47 @@ def test_spikes_look_like_spikes() -> None:
     assert len(sweep.spikes) > 3
     assert np.all(sweep.voltage[sweep.spikes] == 30.0)
     assert np.all(sweep.voltage[sweep.spikes[:-1] + 21] < -60)
+
+
+@pytest.mark.parametrize(("current_nA", "deflection_mV"), [(-0.2, -20.0), (0.1, 5.0), (0.4, 8.0)])
+def test_rectification_compresses_depolarisation_only(
+    current_nA: float, deflection_mV: float
+) -> None:
+    """R I = −20, 10, 40 mV and a = 10 mV: x/(1 + x/a) is −20 (as it is), 5 and 8 mV."""
+    cell = rc_neuron(rectification_mV=10.0)
+    held = membrane(cell, np.full(500, current_nA), 0.1)
+    np.testing.assert_allclose(held, -70.0 + deflection_mV, atol=1e-6)
+
+
+def test_weak_rectification_is_none() -> None:
+    current = np.random.default_rng(9).normal(0.1, 0.1, 500)
+    linear = membrane(rc_neuron(), current, 0.1)
+    np.testing.assert_allclose(
+        membrane(rc_neuron(rectification_mV=1e9), current, 0.1), linear, atol=1e-6
+    )
+
+
+def test_spikes_triggered_by_noise_come_when_it_is_high() -> None:
+    """Weighting by exp(r/Δu) shifts a Gaussian noise of sd σ by σ²/Δu: 1/2 mV here.
+
+    Rare spikes, so that none is kept away by the one before it; without the option the mean is 0.
+    """
+    noise = Noise((1.0,), (10.0,))
+    found = {}
+    for triggers in (False, True):
+        cell = rc_neuron(
+            0.5,
+            threshold_mV=-70 + 2 * np.log(200),
+            softness_mV=2.0,
+            noise=noise,
+            noise_triggers=triggers,
+        )
+        sweep = simulate(cell, np.zeros((1, 2_000_000)), 0.5, np.random.default_rng(10)).sweeps[0]
+        assert sweep.spikes is not None
+        assert len(sweep.spikes) > 3000
+        # The sample before a spike: the spike's own is replaced by its shape.
+        before = sweep.voltage[sweep.spikes[sweep.spikes > 0] - 1] + 70.0
+        found[triggers] = before[before < 8.0].mean()
+    error = 1.0 / np.sqrt(3000)
+    assert found[False] == pytest.approx(0.0, abs=4 * error)
+    assert found[True] == pytest.approx(0.5 * np.exp(-0.5 / 10), abs=4 * error)

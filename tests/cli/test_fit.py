@@ -161,6 +161,7 @@ def test_folder_has_the_agreed_files_and_columns(fitted: Path) -> None:
     names = {p.name for p in cell.iterdir()}
     assert names == {
         "posterior.nc", "kernels.csv", "features.csv", "verdict.json", "digest.npz", "figures",
+        "durations.csv",
     }  # fmt: skip
     with (cell / "kernels.csv").open(encoding="utf-8") as file:
         kernels = list(csv.DictReader(file))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -15,6 +16,7 @@ from simulated_cells import (
 )
 
 from bayesglm.checks.simulation import simulate
+from bayesglm.fitting import judge
 from bayesglm.fitting.run import fit
 from bayesglm.inference.results import CellFit
 from bayesglm.recording.recording import Recording
@@ -67,6 +69,10 @@ def test_a_linear_cell_passes(linear_fit: CellFit) -> None:
         "linearity",
         "prior_share_input",
         "prior_share_after_spike",
+        "durations",
+        "durations_input",
+        "durations_after_spike",
+        "spike_window",
     }
     verdict = linear_fit.verdict
     assert (verdict.units, verdict.observe, verdict.divergences) == (40, "voltage", 0)
@@ -181,3 +187,18 @@ def test_every_open_reason_has_advice_and_a_command(
     for reason in (*few.verdict.open_reasons, *white_fit.verdict.open_reasons):
         assert reason.advice, reason.check
         assert reason.command.startswith("bayesglm "), reason.check
+
+
+def test_the_command_for_one_drive_names_every_sweep_that_was_joined() -> None:
+    """Two of three units are the strongest; each is two sweeps of the file."""
+    recording = recording_of_noise(neuron(), seed=1, n_sweeps=3, seconds=0.2)
+    sweeps = tuple(
+        replace(sweep, number=2 * k, joined=((2 * k, 0), (2 * k + 1, 200)))
+        for k, sweep in enumerate(recording.sweeps)
+    )
+    split = SimpleNamespace(ranges=[SimpleNamespace(units=np.array([1, 2]))])
+    digest = SimpleNamespace(n_units=3, sweep=np.arange(3))
+    summary = SimpleNamespace(splits={"after_spike": split})
+    joined = replace(recording, sweeps=sweeps)
+    command = judge._one_drive([joined], digest, summary, Settings())  # type: ignore[arg-type]
+    assert "--select 'sweeps=2-5'" in command

@@ -91,7 +91,7 @@ def test_a_second_fit_of_the_same_shape_compiles_nothing(linear_fit: CellFit) ->
 def test_stages_are_told_and_timed(linear_recording: Recording) -> None:
     told: list[str] = []
     found = fit(linear_recording, progress=told.append)
-    assert told == ["digest", "calibrate", "sample", "summarise"]
+    assert told == ["digest", "calibrate", "sample", "summarise", "sensitivity"]
     assert list(found.verdict.seconds) == told
     assert all(seconds >= 0 for seconds in found.verdict.seconds.values())
 

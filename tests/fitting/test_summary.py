@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from scipy.stats import norm
 
 from bayesglm.checks.splits import between_sd
 from bayesglm.features import feature_draws
@@ -63,22 +64,25 @@ def test_every_kernel_is_split_into_three_ranges(summary: Summary, linear_fit: C
 
 
 def test_protocol_columns_are_the_hull_of_interval_and_ranges(summary: Summary) -> None:
+    reach = norm.ppf(0.95)
     for kernel in ("input", "after_spike"):
         band, ranges = summary.kernels[kernel], summary.splits[kernel].ranges
         means = np.array([one.curve[0] for one in ranges])
         sds = np.array([one.curve[1] for one in ranges])
         known = np.isfinite(band.mean)
-        lower = np.minimum(band.lower, means.min(axis=0))
-        upper = np.maximum(band.upper, means.max(axis=0))
+        lower = np.minimum(band.lower, (means - reach * sds).min(axis=0))
+        upper = np.maximum(band.upper, (means + reach * sds).max(axis=0))
         np.testing.assert_array_equal(band.protocol_lower[known], lower[known])
         np.testing.assert_array_equal(band.protocol_upper[known], upper[known])
         np.testing.assert_array_equal(band.between_range_sd[known], between_sd(means, sds)[known])
         for name in ("protocol_lower", "protocol_upper", "between_range_sd"):
             assert np.isnan(getattr(band, name)[~known]).all()
     resistance = next(one for one in summary.features if one.name == "input_resistance")
-    values = [one.features["input_resistance"][0] for one in summary.splits["input"].ranges]
-    assert resistance.protocol_lower == min(resistance.lower, *values)
-    assert resistance.protocol_upper == max(resistance.upper, *values)
+    values = [one.features["input_resistance"] for one in summary.splits["input"].ranges]
+    lowest = min(resistance.lower, *(mean - reach * sd for mean, sd in values))
+    highest = max(resistance.upper, *(mean + reach * sd for mean, sd in values))
+    assert resistance.protocol_lower == pytest.approx(lowest)
+    assert resistance.protocol_upper == pytest.approx(highest)
 
 
 def test_each_range_knows_less_than_the_whole(summary: Summary) -> None:

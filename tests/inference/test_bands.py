@@ -16,7 +16,7 @@ from bayesglm.inference.bands import (
 )
 from bayesglm.inference.results import Band
 from bayesglm.kernels.basis import KernelSpec
-from bayesglm.kernels.design import VoltageDesign
+from bayesglm.kernels.design import VoltageDesign, electrode_spec
 
 DESIGN = VoltageDesign(KernelSpec(100.0, 6), KernelSpec(60.0, 5))
 P = DESIGN.n_weights
@@ -41,6 +41,14 @@ def test_rows_evaluate_one_kernel_of_all_weights() -> None:
     expected = DESIGN.after_spike.evaluate(lags) @ weights[place]  # type: ignore[union-attr]
     np.testing.assert_allclose(kernel_rows(DESIGN, "after_spike", lags) @ weights, expected)
     assert kernel_rows(DESIGN, "electrode", np.zeros(1)) @ weights == [2.0]
+
+
+def test_an_electrode_that_charges_has_a_lag_for_each_weight() -> None:
+    design = VoltageDesign(KernelSpec(100.0, 6), None, electrode_kernel=electrode_spec(0.8, 0.05))
+    lags = kernel_lags(design, "electrode")
+    np.testing.assert_allclose(lags, [0.0, 0.1, 0.3, 0.5, 0.7])
+    weights = np.arange(float(design.n_weights))
+    np.testing.assert_array_equal(kernel_rows(design, "electrode", lags) @ weights, np.arange(1, 6))
 
 
 def test_after_spike_kernel_is_known_only_after_the_spike_window() -> None:

@@ -9,6 +9,7 @@ from scipy.signal import lfilter
 from bayesglm.inference import diagnose
 from bayesglm.inference.diagnose import Commands, SamplerSummary, summarise_sampler
 from bayesglm.inference.sample import Chains
+from bayesglm.likelihood.jackknife import UnitCount
 from bayesglm.verdict import Reason
 
 COMMANDS = Commands(
@@ -137,16 +138,35 @@ def test_limits_of_the_sampler(change: dict[str, float], check: str, severity: s
 )
 def test_limits_of_the_number_of_units(n: int, severity: str) -> None:
     labels = tuple(f"sweep {k}" for k in range(n))
-    reasons = diagnose.unit_reasons(n, n - 1.0, np.full(n, 0.2), labels, COMMANDS)
+    count = UnitCount(n, n - 0.5)
+    reasons = diagnose.unit_reasons(count, n - 1.0, np.full(n, 0.2), labels, COMMANDS)
     assert grades(reasons) == {"units": severity, "one_unit_decides": "passed"}
-    assert reasons[0].value == f"{n} independent units, {n - 1:.1f} degrees of freedom"
+    assert reasons[0].value == (
+        f"{n} independent units, worth {n - 0.5:.1f} equal ones; {n - 1:.1f} degrees of freedom"
+    )
+
+
+def test_repeats_count_as_one_and_the_count_is_told() -> None:
+    """Eighty units of eight currents are eight, not eighty."""
+    labels = tuple(f"unit {k}" for k in range(80))
+    count = UnitCount(8, 7.6, repeated=True, floored=2)
+    row = diagnose.unit_reasons(count, 6.1, np.full(80, 0.2), labels, COMMANDS)[0]
+    assert row.verdict == "caution"
+    assert row.value == (
+        "80 units of 8 different currents, worth 7.6 equal ones: clustered by current and by "
+        "sweep; 2 negative variances are set to zero; 6.1 degrees of freedom"
+    )
+    assert "other currents" in row.advice
+    joined = UnitCount(12, 12.0, neighbours=True)
+    row = diagnose.unit_reasons(joined, 9.0, np.full(80, 0.2), labels, COMMANDS)[0]
+    assert "short blocks are joined to their neighbours" in row.value
 
 
 def test_a_unit_that_decides_is_named() -> None:
     leverage = np.full(12, 0.1)
     leverage[7] = 0.83
     labels = tuple(f"sweep {k}" for k in range(12))
-    row = diagnose.unit_reasons(12, 8.0, leverage, labels, COMMANDS)[1]
+    row = diagnose.unit_reasons(UnitCount(12, 12.0), 8.0, leverage, labels, COMMANDS)[1]
     assert (row.verdict, row.value) == ("caution", "sweep 7 carries 83 % of a direction")
     assert row.command == COMMANDS.check
 

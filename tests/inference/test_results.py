@@ -71,7 +71,7 @@ def test_open_reasons_stand_worst_first() -> None:
         Reason(name, "", verdict=verdict)
         for name, verdict in [("a", "caution"), ("b", "passed"), ("c", "failed"), ("d", "caution")]
     )
-    verdict = Verdict("failed", reasons, "voltage", 5, {}, "", 1.0, 1.0, 0, 0, 0)
+    verdict = Verdict("failed", reasons, "voltage", 5, 5.0, {}, "", 1.0, 1.0, 0, 0, 0)
     assert [reason.check for reason in verdict.open_reasons] == ["c", "a", "d"]
 
 
@@ -79,3 +79,17 @@ def test_open_reasons_stand_worst_first() -> None:
 def test_json_has_no_nan(value: float) -> None:
     assert finite_or_none(value) is None
     assert finite_or_none(np.float64(1.5)) == 1.5
+
+
+def test_the_simultaneous_band_says_over_which_lags_it_holds(linear_fit: CellFit) -> None:
+    """From the window's end; lags pinned to zero by construction are left out."""
+    for name in ("input", "after_spike"):
+        band = linear_fit.kernel(name)
+        first, last = band.simultaneous_range_ms
+        held = (band.lags_ms >= first) & (band.lags_ms <= last)
+        assert np.nanmin(band.sd[held]) > 0
+        assert band.sd[np.flatnonzero(held)[-1]] > 0.02 * np.nanmax(band.sd)
+        assert np.all(~(band.sd[band.lags_ms > last] > 0.02 * np.nanmax(band.sd)))
+    assert linear_fit.kernel("after_spike").simultaneous_range_ms[0] == 5.5
+    blank = np.full_like(band.sd, np.nan)
+    assert np.isnan(replace(band, sd=blank).simultaneous_range_ms).all()

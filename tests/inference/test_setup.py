@@ -18,6 +18,7 @@ from bayesglm.inference.setup import (
     refuse_unusable,
     resolve_design,
 )
+from bayesglm.kernels.basis import KernelSpec
 from bayesglm.likelihood.least_squares import correlation_time_ms
 from bayesglm.models.priors import weight_prior
 from bayesglm.recording.recording import Recording
@@ -101,6 +102,54 @@ def test_stated_values_stand() -> None:
     assert design.after_spike is not None
     assert design.after_spike.warp_ms == 5
     assert (design.row_ms, design.electrode, design.spike_window_ms) == (1.0, False, (-2.0, 4.0))
+
+
+def test_a_basis_has_its_own_number_of_weights_and_no_more_bins_than_rows() -> None:
+    assignments = ["kernels.after_spike.duration_ms=200", "kernels.input.basis=lags"]
+    assignments += ["kernels.after_spike.basis=exponentials", "kernels.after_spike.terms=2"]
+    for duration, weights in ((25, 50), (100, 60)):
+        settings = override(Settings(), [*assignments, f"kernels.input.duration_ms={duration}"])
+        design = resolve_design((step_recording(),), settings)
+        assert design.input == KernelSpec(duration, weights, 2.0, "lags", 0.5)
+        assert design.after_spike == KernelSpec(200, 14, 2.0, "exponentials", 0.5, 2)
+
+
+@pytest.mark.parametrize("basis", ["cosines", "lags", "exponentials"])
+def test_the_time_constant_of_a_first_fit_needs_no_certain_basis(
+    basis: str, linear_recording: Recording
+) -> None:
+    """Truth 20 ms; the mean lag of κ errs on the long side."""
+    assignments = [f"kernels.{name}.basis={basis}" for name in ("input", "after_spike")]
+    duration = resolve_design((linear_recording,), override(Settings(), assignments))
+    assert 90 <= duration.input.duration_ms <= 150
+
+
+def test_an_electrode_kernel_has_bins_of_whole_steps() -> None:
+    fine = replace(step_recording(), step_ms=0.05)
+    settings = override(Settings(), ["kernels.electrode.duration_ms=0.8"])
+    found = resolve_design((fine,), settings).electrode_kernel
+    assert found is not None
+    assert (found.duration_ms, found.weights) == (0.8, 4)
+    with pytest.raises(InputError, match="set it to at least 1, or to 0"):
+        resolve_design((replace(fine, step_ms=1.0),), settings)
+
+
+@pytest.mark.parametrize(
+    ("assignments", "message"),
+    [
+        (["kernels.electrode.duration_ms=1"], "expected less than 1"),
+        (
+            ["kernels.electrode.include=false", "kernels.electrode.duration_ms=0.5"],
+            "kernels.electrode: duration_ms is 0.5 where include is false; expected 0",
+        ),
+        (["kernels.input.weights=61"], "kernels.input: weights is 61; expected at most 60 splines"),
+        (["kernels.input.basis=bumps"], "expected 'splines', 'cosines', 'lags' or 'exponentials'"),
+        (["kernels.input.terms=0"], "expected greater than or equal to 1"),
+    ],
+)
+def test_refuses_shapes_that_cannot_be(assignments: list[str], message: str) -> None:
+    with pytest.raises(InputError, match=message):
+        override(Settings(), assignments)
 
 
 def test_without_spikes_there_is_no_after_spike_kernel() -> None:

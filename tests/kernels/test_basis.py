@@ -1,4 +1,4 @@
-"""B-splines on the warped axis, against SciPy's and against their defining properties."""
+"""Bases on the warped axis, against SciPy's splines and against their defining properties."""
 
 from __future__ import annotations
 
@@ -9,7 +9,8 @@ from hypothesis import strategies as st
 from scipy.interpolate import BSpline
 
 from bayesglm.errors import InputError
-from bayesglm.kernels.basis import KernelSpec
+from bayesglm.kernels.basis import DEFAULT_WEIGHTS, KernelSpec
+from bayesglm.recording.settings import Basis
 
 
 def knots_of(weights: int) -> np.ndarray:
@@ -41,6 +42,75 @@ def test_all_splines_but_the_last_sum_to_one_until_the_last_begins() -> None:
     total = spec.evaluate(lags).sum(axis=1)
     np.testing.assert_allclose(total[before_last], 1.0, atol=1e-12)
     assert np.all(total[~before_last] < 1.0 + 1e-12)
+
+
+@pytest.mark.parametrize("basis", list(DEFAULT_WEIGHTS))
+def test_every_basis_is_zero_before_lag_zero_and_beyond_the_end(basis: Basis) -> None:
+    spec = KernelSpec(100.0, 20, 2.0, basis, 0.5)
+    lags = np.array([-5.0, -1e-9, 0.0, 0.05, 50.0, 99.9, 100.0, 100.01, 1e4])
+    values = spec.evaluate(lags)
+    assert values.shape == (9, 20)
+    outside = [0, 1, 7, 8] + ([6] if basis in ("splines", "cosines") else [])
+    for k in range(len(lags)):
+        assert values[k].any() == (k not in outside), lags[k]
+    # No weight without an effect, and no two that cannot be told apart.
+    assert np.linalg.matrix_rank(spec.evaluate(spec.lags(0.05))) == 20
+
+
+@pytest.mark.parametrize("weights", [5, 14, 30])
+def test_cosines_equal_their_formula_and_end_at_zero(weights: int) -> None:
+    """Source: ½(1 + cos(π(x − c)/2Δ)) one bump at a time; the last less its mirror image."""
+    spec = KernelSpec(200.0, weights, 3.0, "cosines")
+    gap = 1 / (weights - 1)
+    for lag in (0.0, 0.7, 5.0, 40.0, 150.0, 199.0):
+        x = np.log(1 + lag / 3) / np.log(1 + 200 / 3)
+        expected = np.zeros(weights)
+        for j in range(weights):
+            for centre, sign in (((j - 1) * gap, 1), (2 - (j - 1) * gap, -1)):
+                if abs(x - centre) < 2 * gap:
+                    expected[j] += sign * (1 + np.cos(np.pi * (x - centre) / (2 * gap))) / 2
+        np.testing.assert_allclose(spec.evaluate(np.array([lag]))[0], expected, atol=1e-12)
+    assert np.abs(spec.evaluate(np.array([200 * (1 - 1e-9)]))).max() < 1e-6
+
+
+def test_cosines_of_one_height_are_a_plateau() -> None:
+    """Four bumps overlap everywhere and sum to two, until the end draws near."""
+    spec = KernelSpec(100.0, 12, basis="cosines")
+    lags = spec.unwarp(np.linspace(0.0, 1 - 2 / 11, 200))
+    np.testing.assert_allclose(spec.evaluate(lags).sum(axis=1), 2.0, atol=1e-12)
+
+
+@pytest.mark.parametrize("duration", [300.0, 57.3, 100.0, 20.0])
+@pytest.mark.parametrize("row", [0.5, 0.6, 1.0])
+@pytest.mark.parametrize("weights", [1, 5, 20, 60, 10**6])
+def test_bins_of_lags_are_whole_rows_that_widen_and_none_is_empty(
+    duration: float, row: float, weights: int
+) -> None:
+    weights = min(weights, int(duration / row + 1e-9))
+    spec = KernelSpec(duration, weights, 2.0, "lags", row)
+    edges = spec.edges_ms
+    assert (len(edges), edges[0], edges[-1]) == (weights + 1, 0.0, duration)
+    rows = np.diff(edges[:-1]) / row
+    np.testing.assert_allclose(rows, rows.round(), atol=1e-9)
+    assert np.all(np.diff(edges) > row * (1 - 1e-9))
+    assert np.all(np.diff(rows) > -1.5)
+    values = spec.evaluate(spec.lags(row / 5))
+    np.testing.assert_array_equal(values.sum(axis=1), 1.0)
+    assert values.any(axis=0).all()
+
+
+def test_one_coefficient_for_every_row_of_lag() -> None:
+    """Bins are closed on the right: a kernel of K lags has K coefficients."""
+    spec = KernelSpec(50.0, 100, 2.0, "lags", 0.5)
+    np.testing.assert_array_equal(spec.evaluate(spec.lags(0.5)), np.eye(100))
+    fine = spec.evaluate(spec.lags(0.1))
+    np.testing.assert_array_equal(fine, np.repeat(np.eye(100), 5, axis=0))
+
+
+def test_few_bins_are_even_on_the_warped_axis() -> None:
+    spec = KernelSpec(300.0, 12, 20.0, "lags", 0.1)
+    places = spec.warp(spec.edges_ms)
+    np.testing.assert_allclose(np.diff(places), 1 / 12, atol=0.01)
 
 
 @given(
@@ -106,3 +176,21 @@ def test_refuses_impossible_kernels(
 ) -> None:
     with pytest.raises(InputError, match=message):
         KernelSpec(duration, weights, warp)
+
+
+@pytest.mark.parametrize(
+    ("spec", "message"),
+    [
+        ((100.0, 14, 2.0, "lags"), "finest_ms 0; expected the length of a row, above 0"),
+        ((100.0, 14, 2.0, "exponentials"), "finest_ms 0; expected the length of a row"),
+        ((100.0, 201, 2.0, "lags", 0.5), "201 bins .* 100 ms; expected at most 200 bins"),
+        ((100.0, 0, 2.0, "lags", 0.5), "0 weights; expected at least 1"),
+        (
+            (100.0, 14, 2.0, "exponentials", 0.5, 0),
+            "0 exponentials on 14 splines; expected 1 to 14",
+        ),
+    ],
+)
+def test_refuses_what_a_basis_cannot_be(spec: tuple[float, ...], message: str) -> None:
+    with pytest.raises(InputError, match=message):
+        KernelSpec(*spec)  # type: ignore[arg-type]

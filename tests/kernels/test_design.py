@@ -9,16 +9,18 @@ import numpy as np
 import pytest
 
 from bayesglm.errors import InputError
-from bayesglm.kernels.basis import KernelSpec
+from bayesglm.kernels.basis import DEFAULT_WEIGHTS, KernelSpec
 from bayesglm.kernels.design import (
     RowFilter,
     VoltageDesign,
     default_row_ms,
+    electrode_spec,
     filter_rows,
     row_filter,
     row_means,
     samples_per_row,
 )
+from bayesglm.recording.settings import Basis
 
 
 def filtered(f: RowFilter, signal: np.ndarray, before: float) -> np.ndarray:
@@ -43,6 +45,27 @@ def convolved(kernel: np.ndarray, signal: np.ndarray, before: float, m: int) -> 
         past = padded[len(kernel) - k : len(kernel) - k + n]
         full += past[:, None] * kernel[k - 1]
     return full[: n // m * m].reshape(n // m, m, -1).mean(axis=1)
+
+
+@pytest.mark.parametrize("basis", list(DEFAULT_WEIGHTS))
+def test_rows_equal_convolution_in_every_basis(basis: Basis) -> None:
+    """Source: the definition, lag by lag."""
+    spec = KernelSpec(20.0, 9, 2.0, basis, 1.0)
+    signal = np.random.default_rng(0).normal(size=403)
+    f = row_filter(spec, 0.2, 5, n_fft=128)
+    expected = convolved(spec.evaluate(spec.lags(0.2)), signal, 0.7, 5)
+    assert np.linalg.matrix_rank(expected) == 9
+    np.testing.assert_allclose(filtered(f, signal, 0.7), expected, atol=1e-12)
+
+
+@pytest.mark.parametrize("basis", list(DEFAULT_WEIGHTS))
+def test_no_basis_looks_ahead(basis: Basis) -> None:
+    f = row_filter(KernelSpec(20.0, 9, 2.0, basis, 1.0), 0.2, 5, n_fft=128)
+    signal = np.zeros(200)
+    signal[104] = 1.0
+    rows = filtered(f, signal, 0.0)
+    assert np.abs(rows[:21]).max() < 1e-14
+    assert np.abs(rows[21]).max() > 0.1
 
 
 @pytest.mark.parametrize("m", [1, 2, 5, 25])
@@ -120,6 +143,34 @@ def test_columns_stand_in_order_without_gaps() -> None:
     assert design.columns == expected
     assert design.n_weights == 26
     assert list(design.kernels) == ["input", "after_spike"]
+
+
+def test_an_electrode_kernel_widens_the_electrode_term() -> None:
+    design = VoltageDesign(KernelSpec(100.0, 14), None, electrode_kernel=electrode_spec(0.9, 0.05))
+    assert design.columns["electrode"] == slice(1, 6)
+    assert design.columns["input"] == slice(6, 20)
+
+
+@pytest.mark.parametrize(
+    ("duration", "step", "counts"),
+    [
+        (0.9, 0.05, [4, 5, 4, 5]),
+        (0.8, 0.05, [4] * 4),
+        (0.3, 0.1, [1] * 3),
+        (0.5, 0.5, [1]),
+        (0.35, 0.05, [1, 2, 2, 2]),
+    ],
+)
+def test_bins_of_the_electrode_are_equal_to_a_step(
+    duration: float, step: float, counts: list[int]
+) -> None:
+    spec = electrode_spec(duration, step)
+    assert spec.evaluate(spec.lags(step)).sum(axis=0).tolist() == counts
+
+
+def test_refuses_an_electrode_kernel_shorter_than_a_step() -> None:
+    with pytest.raises(InputError, match=r"duration_ms is 0.3 ms, .* step is 0.5 ms; set it to at"):
+        electrode_spec(0.3, 0.5)
 
 
 def test_columns_without_electrode_and_spikes() -> None:

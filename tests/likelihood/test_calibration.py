@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from functools import lru_cache
 
 import numpy as np
@@ -31,31 +32,33 @@ from bayesglm.likelihood.least_squares import (
     least_squares,
     noise_log_sd,
     sandwich,
-    with_sweep_offsets,
+    with_sweep_effects,
 )
 from bayesglm.likelihood.voltage import voltage_digest
 
 DESIGN = VoltageDesign(
     KernelSpec(15.0, 6, 10.0), KernelSpec(18.0, 5, 10.0), row_ms=0.5, spike_window_ms=(-0.5, 1.0)
 )
-#: (step, lengths of the sweeps, blocks a sweep, ρ)
+#: (step, lengths of the sweeps, blocks a sweep, ρ of offsets and drifts)
 CASES = [
-    pytest.param(0.25, (1000, 700, 803, 900, 750, 640), 1, 0.0, id="sweeps, no offsets"),
-    pytest.param(0.25, (1000, 700, 803, 900, 750, 640), 1, 0.05, id="sweeps, offsets"),
-    pytest.param(0.5, (1000, 1000), 6, 0.0, id="blocks, no offsets"),
-    pytest.param(0.5, (1000, 1000), 6, 0.05, id="blocks, offsets"),
+    pytest.param(0.25, (1000, 700, 803, 900, 750, 640), 1, (0.0,), id="sweeps, no offsets"),
+    pytest.param(0.25, (1000, 700, 803, 900, 750, 640), 1, (0.05,), id="sweeps, offsets"),
+    pytest.param(0.25, (1000, 700, 803, 900, 750, 640), 1, (0.05, 0.02), id="sweeps, drifts"),
+    pytest.param(0.5, (1000, 1000), 6, (0.0,), id="blocks, no offsets"),
+    pytest.param(0.5, (1000, 1000), 6, (0.05,), id="blocks, offsets"),
+    pytest.param(0.5, (1000, 1000), 6, (0.05, 0.02), id="blocks, drifts"),
 ]
 
 
 @lru_cache
 def reduced(
-    step_ms: float, lengths: tuple[int, ...], n_blocks: int
+    step_ms: float, lengths: tuple[int, ...], n_blocks: int, drift: bool = False
 ) -> tuple[VoltageDigest, reference.Rows]:
     """A recording reduced by the fast path and by the slow one."""
-    recording = arbitrary_recording(step_ms, lengths)
+    recording, design = arbitrary_recording(step_ms, lengths), replace(DESIGN, drift=drift)
     block_ms = None if n_blocks == 1 else min(lengths) * step_ms / n_blocks
-    fast = voltage_digest((recording,), DESIGN, block_ms)
-    return fast, reference.recording_rows(recording, DESIGN, n_blocks)
+    fast = voltage_digest((recording,), design, block_ms)
+    return fast, reference.recording_rows(recording, design, n_blocks)
 
 
 def in_weights(fit: LeastSquares, covariance: np.ndarray) -> np.ndarray:
@@ -69,12 +72,13 @@ def scaled(found: np.ndarray, expected: np.ndarray) -> float:
     return float(np.max(np.abs(found - expected) / np.outer(sd, sd)))
 
 
-@pytest.mark.parametrize(("step_ms", "lengths", "n_blocks", "ratio"), CASES)
+@pytest.mark.parametrize(("step_ms", "lengths", "n_blocks", "ratios"), CASES)
 def test_everything_equals_the_slow_twin(
-    step_ms: float, lengths: tuple[int, ...], n_blocks: int, ratio: float
+    step_ms: float, lengths: tuple[int, ...], n_blocks: int, ratios: tuple[float, ...]
 ) -> None:
     """Estimate, white, cluster and jackknife covariance; refits by QR on the other side."""
-    digest, rows = reduced(step_ms, lengths, n_blocks)
+    digest, rows = reduced(step_ms, lengths, n_blocks, drift=len(ratios) > 1)
+    ratio = np.array(ratios)
     fit = least_squares(digest, column_scale(digest), ratio)
     assert fit.lost.shape[1] == 0
     weights, inverse, variance = reference.estimate(rows, ratio)
@@ -113,6 +117,23 @@ def regression(
     x = np.column_stack([np.ones(n), *(correlated(rng, n, 0.9) for _ in range(n_columns + 1))])
     truth = np.concatenate([[-65.0], np.linspace(-1, 1, n_columns + 1)])
     return matrix_digest(x, x @ truth + correlated(rng, n, phi), n_units), truth
+
+
+def test_lost_directions_carry_no_precision_whatever_the_scale() -> None:
+    """A scale that mixes the weights leaves lost and excited directions at any angle."""
+    rng = np.random.default_rng(9)
+    x = np.column_stack([np.ones(4000), rng.normal(size=(4000, 6))])
+    x[:, 4] = x[:, 3]
+    digest = matrix_digest(x, x @ np.ones(7) + rng.normal(size=4000), 8, plain_design(5))
+    fit = least_squares(digest, np.tril(rng.normal(size=(7, 7))) + 3 * np.eye(7))
+    calibration = calibrate(digest, fit, np.eye(7))
+    size = np.linalg.norm(calibration.precision)
+    assert np.abs(calibration.precision @ fit.lost).max() < 1e-9 * size
+    assert np.abs(calibration.white_precision @ fit.lost).max() < 1e-9 * size
+    np.testing.assert_allclose(fit.back @ fit.basis, np.eye(6), atol=1e-9)
+    # What the data say of the weights is H/σ² for white residuals, lost directions and all.
+    information = x.T @ x / fit.residual_variance
+    np.testing.assert_allclose(calibration.white_precision, information, rtol=1e-8, atol=1e-6)
 
 
 def test_directions_never_excited_are_told_and_carry_no_precision() -> None:
@@ -305,14 +326,14 @@ def offset_recording(sd_mV: float, seed: int) -> tuple[VoltageDigest, LeastSquar
     cell = neuron(noise=Noise((0.5,), (10.0,), sweep_sd_mV=sd_mV), threshold_mV=50.0)
     recording = simulate(cell, coloured_current(rng, 20, 2.0), STEP_MS, rng)
     digest = voltage_digest((recording,), VoltageDesign(KernelSpec(150.0), None), None)
-    return digest, with_sweep_offsets(digest, column_scale(digest))
+    return digest, with_sweep_effects(digest, column_scale(digest))
 
 
 def test_sweep_offsets_are_found_and_noise_is_not_taken_for_them() -> None:
     """Sd 1 mV is found; none stays small beside the noise of a sweep's mean, 0.05 mV."""
-    found = [offset_recording(1.0, seed)[1].offset_variance for seed in range(5)]
+    found = [offset_recording(1.0, seed)[1].sweep_variances[0] for seed in range(5)]
     assert np.mean(found) == pytest.approx(1.0, rel=0.4)
-    none = [offset_recording(0.0, seed)[1].offset_variance for seed in range(5)]
+    none = [offset_recording(0.0, seed)[1].sweep_variances[0] for seed in range(5)]
     assert np.mean(none) < 0.05**2
 
 
@@ -328,6 +349,6 @@ def test_the_level_is_as_uncertain_as_the_offsets_make_it() -> None:
 def test_a_perfect_fit_has_no_residual_and_no_offsets() -> None:
     x = np.column_stack([np.ones(3000), np.random.default_rng(8).normal(size=(3000, 6))])
     digest = matrix_digest(x, x @ np.ones(7), 6)
-    fit = with_sweep_offsets(digest, column_scale(digest))
+    fit = with_sweep_effects(digest, column_scale(digest))
     np.testing.assert_allclose(fit.weights, 1.0, atol=1e-10)
     assert fit.residual_variance < 1e-12

@@ -16,7 +16,16 @@ from bayesglm.likelihood.digest import VoltageDigest, add, content_hash
 from bayesglm.likelihood.voltage import voltage_digest
 
 DESIGN = VoltageDesign(KernelSpec(20.0, 6), KernelSpec(15.0, 5), spike_window_ms=(-0.5, 1.0))
-ARRAYS = ("gram", "bands", "band_share", "sweep", "drive_nA", "current_sd_nA", "spikes", "seconds")
+ARRAYS = (
+    "sums",
+    "band_sums",
+    "band_share",
+    "sweep",
+    "drive_nA",
+    "current_sd_nA",
+    "spikes",
+    "seconds",
+)
 
 
 @pytest.fixture(scope="module")
@@ -74,7 +83,7 @@ def test_refuses_another_version(digest: VoltageDigest, tmp_path: Path) -> None:
     with np.load(tmp_path / "now.npz") as file:
         content = {name: file[name] for name in file.files}
     np.savez(tmp_path / "later.npz", **(content | {"version": np.array(99)}))
-    with pytest.raises(InputError, match=r"later\.npz: digest of version 99; expected 1"):
+    with pytest.raises(InputError, match=r"later\.npz: digest of version 99; expected 2"):
         VoltageDigest.load(tmp_path / "later.npz")
 
 
@@ -117,7 +126,7 @@ def test_merged_units_sum_and_stay_within_their_sweep(digest: VoltageDigest) -> 
     assert np.bincount(digest.sweep).tolist() == [5, 3, 2]
     assert np.bincount(merged.sweep).tolist() == [2, 1, 1]
     for sweep in range(3):
-        for name in ("gram", "bands", "spikes", "seconds"):
+        for name in ("sums", "band_sums", "spikes", "seconds"):
             whole = getattr(digest, name)[digest.sweep == sweep].sum(axis=0)
             np.testing.assert_allclose(
                 getattr(merged, name)[merged.sweep == sweep].sum(axis=0), whole
@@ -145,7 +154,14 @@ def test_taking_units_keeps_everything_of_them(digest: VoltageDigest) -> None:
 
 
 def test_hash_tells_numbers_apart(digest: VoltageDigest) -> None:
-    changed = digest.gram.copy()
+    changed = digest.sums.copy()
     changed[0, 0, 0] = np.nextafter(changed[0, 0, 0], np.inf)
     assert content_hash(digest) == content_hash(digest.take(np.arange(digest.n_units)))
-    assert content_hash(digest) != content_hash(replace(digest, gram=changed))
+    assert content_hash(digest) != content_hash(replace(digest, sums=changed))
+
+
+def test_labels_of_joined_sweeps_name_their_whole_span(digest: VoltageDigest) -> None:
+    """A dash may stand in the name of the sweep as well as in its span."""
+    labels = tuple(f"sweeps 3–13, {k}000–{k + 1}000 ms" for k in range(digest.n_units))
+    whole = replace(digest, labels=labels, sweep=np.zeros(digest.n_units, dtype=np.int64))
+    assert whole.merge(2).labels[0] == "sweeps 3–13, 0000–2000 ms"

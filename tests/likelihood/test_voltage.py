@@ -10,8 +10,8 @@ from simulated_cells import arbitrary_recording
 
 from bayesglm.errors import InputError
 from bayesglm.kernels.basis import KernelSpec
-from bayesglm.kernels.design import VoltageDesign, filter_rows
-from bayesglm.likelihood import reference, voltage
+from bayesglm.kernels.design import VoltageDesign, electrode_spec, filter_rows
+from bayesglm.likelihood import chunks, reference, voltage
 from bayesglm.likelihood.digest import BAND_EDGES_HZ, VoltageDigest
 from bayesglm.likelihood.voltage import (
     common_current,
@@ -35,6 +35,8 @@ class Case:
     masked: bool = True
     electrode: bool = True
     after_spike: bool = True
+    drift: bool = False
+    electrode_ms: float = 0.0
 
     @property
     def design(self) -> VoltageDesign:
@@ -43,7 +45,15 @@ class Case:
         after = KernelSpec(1.4 * unit, 5, warp_ms=unit) if self.after_spike else None
         window = (-2 * self.step_ms, 4 * self.step_ms)
         return VoltageDesign(
-            KernelSpec(unit, 6, warp_ms=unit), after, self.electrode, self.row_ms, window
+            KernelSpec(unit, 6, warp_ms=unit),
+            after,
+            electrode=self.electrode,
+            row_ms=self.row_ms,
+            spike_window_ms=window,
+            drift=self.drift,
+            electrode_kernel=(
+                electrode_spec(self.electrode_ms, self.step_ms) if self.electrode_ms else None
+            ),
         )
 
     @property
@@ -65,6 +75,8 @@ CASES = {
     "no mask": Case(0.25, 0.5, (600, 601), masked=False),
     "no electrode": Case(0.25, 0.5, (600, 601), electrode=False),
     "no after-spike kernel": Case(0.25, 0.5, (600, 601), after_spike=False),
+    "drift": Case(0.25, 0.5, (1600, 1600), n_blocks=3, drift=True),
+    "an electrode that charges": Case(0.1, 0.5, (1203, 800), electrode_ms=0.7),
     "longer than a chunk": Case(0.5, 0.5, (9003,)),
 }
 
@@ -87,8 +99,8 @@ def test_gram_matrices_equal_those_of_plain_loops(case: Case) -> None:
     digest = voltage_digest((case.recording,), case.design, case.block_ms)
     rows = reference.recording_rows(case.recording, case.design, case.n_blocks)
     expected = np.array([reference.unit_gram(rows, unit) for unit in np.unique(rows.unit)])
-    assert digest.gram.shape == expected.shape
-    assert scaled_difference(digest.gram, expected) < 1e-12
+    assert digest.sums.shape == expected.shape
+    assert scaled_difference(digest.sums, expected) < 1e-12
 
 
 def test_predictions_equal_the_plain_columns_times_weights(case: Case) -> None:
@@ -246,7 +258,20 @@ def test_a_recording_of_another_length_does_not_retrace() -> None:
     """Compiled once a shape of the kernels, whatever the number and length of sweeps."""
     design = CASES["one sample a row"].design
     voltage_digest((arbitrary_recording(0.5, (900,)),), design, None)
-    counters = (filter_rows, voltage._join_columns, voltage._chunk_sums)
+    counters = (filter_rows, voltage._join_columns, chunks.chunk_sums)
     traced = [one._cache_size() for one in counters]  # type: ignore[attr-defined]
     voltage_digest((arbitrary_recording(0.5, (9500, 333)),), design, 100.0)
     assert [one._cache_size() for one in counters] == traced  # type: ignore[attr-defined]
+
+
+def test_joined_sweeps_stay_units_of_their_own() -> None:
+    """Sweeps without a gap share their past, but each is a unit, as in a protocol of steps."""
+    recording = arbitrary_recording(0.25, (3000,), masked=False)
+    parts = ((4, 0), (5, 900), (6, 2101))
+    joined = replace(recording, sweeps=(replace(recording.sweeps[0], joined=parts),))
+    design = CASES["blocks"].design
+    digest = voltage_digest((joined,), design, None)
+    np.testing.assert_allclose(digest.seconds, [0.225, 0.3, 0.225])
+    whole = voltage_digest((recording,), design, None)
+    assert scaled_difference(digest.sums.sum(axis=0)[None], whole.sums) < 1e-12
+    assert set(digest.sweep.tolist()) == {0}

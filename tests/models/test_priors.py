@@ -7,7 +7,8 @@ import pytest
 
 from bayesglm.inference.bands import kernel_rows
 from bayesglm.kernels.basis import KernelSpec
-from bayesglm.kernels.design import VoltageDesign
+from bayesglm.kernels.design import VoltageDesign, electrode_spec
+from bayesglm.kernels.smoothness import smoothness_prior
 from bayesglm.models.priors import kernel_scales, prior_table, weight_prior
 from bayesglm.recording.settings import PriorsSection
 
@@ -17,6 +18,7 @@ DESIGN = VoltageDesign(KernelSpec(100.0, 10), KernelSpec(300.0, 12))
 def test_root_is_a_square_root_of_the_covariance_at_the_scales() -> None:
     prior = weight_prior(DESIGN, PriorsSection())
     covariance = prior.root @ prior.root.T
+    np.testing.assert_allclose(prior.covariance(prior.sd_scale), covariance, atol=1e-12)
     product = covariance @ prior.precision(prior.sd_scale)
     np.testing.assert_allclose(product, np.eye(DESIGN.n_weights), atol=1e-6)
 
@@ -48,13 +50,55 @@ def test_kernels_drawn_from_the_prior_have_the_stated_size(kernel: str, at_ms: f
     assert draws.std() == pytest.approx(sd[np.argmin(np.abs(lags - at_ms))], rel=0.05)
 
 
-def test_precision_falls_with_the_square_of_the_sds() -> None:
+def test_covariance_grows_with_the_square_of_the_sds() -> None:
     prior = weight_prior(DESIGN, PriorsSection())
     sds = np.array([2.0, 5.0])
     place = DESIGN.columns["after_spike"]
-    expected = prior.fixed[place, place] + prior.bend[1, place, place] / 25
-    np.testing.assert_allclose(prior.precision(sds)[place, place], expected)
+    own = smoothness_prior(KernelSpec(300.0, 12)).covariance(5.0, 10.0)
+    np.testing.assert_allclose(prior.covariance(sds)[place, place], own, atol=1e-12)
+    product = prior.covariance(sds) @ prior.precision(sds)
+    np.testing.assert_allclose(product, np.eye(DESIGN.n_weights), atol=1e-6)
     assert not prior.precision(sds)[DESIGN.columns["input"], place].any()
+
+
+def summed(terms: int) -> KernelSpec:
+    return KernelSpec(100.0, 10, 2.0, "exponentials", 0.5, terms)
+
+
+def test_prior_of_exponentials_is_that_of_drawn_sums() -> None:
+    """Source: kernels drawn from the prior, amplitude by amplitude: sd by lag within 3 %."""
+    design = VoltageDesign(KernelSpec(100.0, 10), summed(2))
+    prior = weight_prior(design, PriorsSection(after_spike_sd=7.0))
+    assert (prior.names, prior.keep.shape) == (("input",), (22, 14))
+    lags = np.array([1.0, 10.0, 50.0])
+    rows = kernel_rows(design, "after_spike", lags)
+    sd = np.sqrt(np.einsum("lp,pq,lq->l", rows, prior.covariance(prior.sd_scale), rows))
+    rng = np.random.default_rng(1)
+    tau = prior.exponentials["after_spike"].draw(40_000, rng)
+    amplitudes = rng.normal(0.0, 14.0, tau.shape)
+    curves = np.einsum("dt,dtl->dl", amplitudes, np.exp(-lags / tau[..., None]))
+    np.testing.assert_allclose(sd, curves.std(axis=0), rtol=0.03)
+    assert not prior.covariance(prior.sd_scale)[design.columns["input"], 12:].any()
+
+
+def test_precision_takes_weights_of_exponentials_as_free() -> None:
+    design = VoltageDesign(summed(3), None)
+    precision = weight_prior(design, PriorsSection(input_sd=5.0)).precision(np.zeros(0))
+    np.testing.assert_allclose(precision[2:, 2:], np.eye(10) / 100, atol=1e-15)
+
+
+def test_table_of_exponentials_and_of_an_electrode_kernel() -> None:
+    design = VoltageDesign(KernelSpec(100.0), summed(2), electrode_kernel=electrode_spec(0.9, 0.05))
+    rows = {row.parameter: row for row in prior_table(design, PriorsSection())}
+    assert rows["amplitudes of η"].prior == "normal(0, 20)"
+    assert rows["2 time constants of η"].prior.endswith("from 0.5 to 100")
+    assert "sd of η" not in rows
+    assert "(1 + s/s0)" not in rows["bends of κ"].prior
+    assert rows["electrode, each of 5 lags"].prior == "normal(0, 50/√5)"
+    prior = weight_prior(design, PriorsSection())
+    total = np.zeros(design.n_weights)
+    total[design.columns["electrode"]] = 1.0
+    assert np.sqrt(total @ prior.covariance(prior.sd_scale) @ total) == pytest.approx(50.0)
 
 
 @pytest.mark.parametrize("electrode", [True, False])
@@ -76,4 +120,4 @@ def test_table_has_a_row_with_unit_and_reason_for_everything_fitted(
 def test_prior_without_spikes_has_no_after_spike_part() -> None:
     prior = weight_prior(VoltageDesign(KernelSpec(100.0), None), PriorsSection())
     assert prior.names == ("input",)
-    assert prior.bend.shape == (1, 16, 16)
+    assert prior.bend.shape == (1, 16)

@@ -112,7 +112,7 @@ def test_coefficients_and_sds_of_the_slow_twin(
 ) -> None:
     x, y = load(name)
     one = np.zeros(len(y), dtype=np.int64)
-    rows = reference.Rows(x, y, one, one)
+    rows = reference.Rows(x, y, np.ones((len(y), 1)), one, one)
     expected, sd, rsd = certified(name)
     weights, _, variance = reference.estimate(rows)
     assert worst(weights, expected) < coefficients

@@ -9,7 +9,7 @@ import pytest
 from bayesglm.errors import InputError
 from bayesglm.recording.loading import load_cell, load_recording
 from bayesglm.recording.settings import Settings
-from bayesglm.recording.settings_input import add_selection
+from bayesglm.recording.settings_input import add_selection, override
 from bayesglm.recording.study import CellEntry, RecordingEntry
 
 
@@ -47,3 +47,14 @@ def test_excluded_and_held_out_files_are_passed_over(path: Path) -> None:
     excluded = RecordingEntry(path, exclude=True, exclude_reason="seal lost")
     held_out = RecordingEntry(path, role="held-out")
     assert load_cell(CellEntry("x", (excluded, held_out)), Settings()) == ()
+
+
+def test_defects_are_told_in_the_numbers_of_the_file(path: Path) -> None:
+    """Before sweeps are joined: the advice can be copied."""
+    settings = override(Settings(), ['recording.contiguous=["0-3"]'])
+    with pytest.raises(InputError, match=r"row 409: .* of sweep 2.*--select 'sweeps=0-1,3'"):
+        load_cell(CellEntry("x", (RecordingEntry(path),)), settings)
+    (recording,) = load_cell(
+        CellEntry("x", (RecordingEntry(path),)), add_selection(settings, ["sweeps=0-1,3"])
+    )
+    assert [sweep.label for sweep in recording.sweeps] == ["sweeps 0–1", "sweep 3"]

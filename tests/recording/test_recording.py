@@ -58,3 +58,19 @@ def test_step_must_be_positive(step: float) -> None:
 def test_needs_a_sweep() -> None:
     with pytest.raises(InputError, match="expected at least one"):
         Recording("a", 1.0, ())
+
+
+def test_a_sweep_in_words() -> None:
+    alone = make_sweep()
+    assert (alone.label, alone.numbers, alone.last_number) == ("sweep 0", (0,), None)
+    joined = dataclasses.replace(alone, number=3, joined=((3, 0), (4, 2), (5, 4)))
+    assert (joined.label, joined.numbers, joined.last_number) == ("sweeps 3–5", (3, 4, 5), 5)
+
+
+def test_rows_are_samples_where_the_file_holds_arrays() -> None:
+    for path, expected in (
+        (Path("a.npz"), "sample 7"),
+        (Path("a.csv.gz"), "row 7"),
+        (None, "row 7"),
+    ):
+        assert Recording("a", 0.5, (make_sweep(),), path=path).place(7) == expected

@@ -23,7 +23,7 @@ def test_defaults_of_the_design() -> None:
         300,
         500,
     )
-    assert settings.kernels.input.weights == 14
+    assert settings.kernels.input.weights is None
     assert settings.kernels.after_spike.report_at_ms == (30.0,)
     assert settings.recording.spike_height_mV == -10.0
 

@@ -216,3 +216,16 @@ def test_load_refused(tmp_path: Path) -> None:
         load([study], cell="c")
     with pytest.raises(InputError, match=r"--set sampling\.sed=1: unknown key"):
         load([study], overrides=["sampling.sed=1"])
+
+
+def test_recordings_of_text_and_of_arrays_are_named_alike(tmp_path: Path) -> None:
+    for name in ("a.csv", "b.csv.gz", "c.1.npz", "a.npz"):
+        (tmp_path / name).touch()
+    study = study_from_recordings(
+        [tmp_path / n for n in ("a.csv", "b.csv.gz", "c.1.npz")], Settings()
+    )
+    assert [cell.name for cell in study.cells] == ["a", "b", "c.1"]
+    with pytest.raises(InputError, match=r"a\.npz: .*a\.csv names a cell 'a' too"):
+        study_from_recordings([tmp_path / "a.csv", tmp_path / "a.npz"], Settings())
+    write_study(tmp_path, recordings=RECORDINGS.replace("b2.csv", "a.npz"))
+    assert read_study(tmp_path).cells[2].recordings[0].path.name == "a.npz"

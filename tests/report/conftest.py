@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
 from made_fit import make_fit
 
 from bayesglm.inference.results import CellFit
+from bayesglm.report import style
 from bayesglm.report.figures import save_figures
 
 
@@ -27,6 +29,13 @@ def quiet_fit() -> CellFit:
 def noise_fit() -> CellFit:
     """Return the fit of a fluctuating current."""
     return make_fit(protocol="noise")
+
+
+@pytest.fixture
+def styled() -> Iterator[None]:
+    """Draw as reports do: titles stand left only in this style."""
+    with style.styled():
+        yield
 
 
 @pytest.fixture(scope="session")

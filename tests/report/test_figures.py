@@ -16,7 +16,15 @@ LABELS = {
     "prediction": ("Voltage (mV)", "Residual (mV)", "Time (ms)"),
     "traces": ("Voltage (mV)", "Current (pA)", "Time (ms)"),
     "residuals": ("Lag (ms)", "Frequency (Hz)", "Power density (mV²/Hz)"),
+    "voltage_current": ("Current step (pA)", "Voltage change (mV)"),
+    "by_sweep": ("Voltage (mV)", "Sweep"),
+    "leave_one_out": ("κ (MΩ/ms)", "η (mV)", "Change (sd)", "Time after the spike (ms)"),
+    "residual_distribution": ("Residual (mV)", "Density (1/mV)", "normal of the same sd"),
+    "prior_posterior": ("Prior share", "above: set by the prior", "Sd of κ (MΩ/ms)", "φ (no unit)"),
+    "trace_rank": ("Chain", "Draw, one chain after the other", "Input resistance (MΩ)"),
 }
+#: What a fluctuating current has not.
+OF_STEPS = {"voltage_current", "by_sweep"}
 
 
 def texts(path: Path) -> set[str]:
@@ -32,11 +40,20 @@ def test_every_figure_is_saved_with_labels_and_units(
     saved = figures.save_figures(
         request.getfixturevalue(protocol), tmp_path / "figures", width_mm=width_mm
     )
-    assert set(saved) == {f"{name}.{kind}" for name in LABELS for kind in ("svg", "png")}
-    for name, labels in LABELS.items():
+    shown = {
+        name: told for name, told in LABELS.items() if protocol == "fit" or name not in OF_STEPS
+    }
+    assert set(saved) == {f"{name}.{kind}" for name in shown for kind in ("svg", "png")}
+    for name, labels in shown.items():
         assert set(labels) <= texts(saved[f"{name}.svg"])
         assert saved[f"{name}.svg"].stat().st_size < 300_000
         assert saved[f"{name}.png"].read_bytes().startswith(b"\x89PNG")
+
+
+def test_figures_are_drawn_in_the_order_of_the_page(fit: CellFit, noise_fit: CellFit) -> None:
+    assert tuple(figures.draw_figures(fit)) == figures.FIGURES
+    without = [name for name in figures.FIGURES if name not in OF_STEPS]
+    assert list(figures.draw_figures(noise_fit)) == without
 
 
 def test_figures_are_reproducible_and_leave_no_global_state(fit: CellFit) -> None:

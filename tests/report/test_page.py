@@ -9,10 +9,15 @@ from pathlib import Path
 import pytest
 from made_fit import CAUTION, FAILED, PASSED, made_neuron, made_truth, renamed, with_reasons
 
+from bayesglm.checks.residuals import residual_moments
 from bayesglm.inference.results import CellFit
 from bayesglm.recording.settings import RecordingSection
 from bayesglm.report.figures import FIGURES
+from bayesglm.report.influence_figures import most_influential
 from bayesglm.report.page import write_page
+from bayesglm.report.predicted import centred_residuals, predict_sweeps
+from bayesglm.report.residual_figures import moments_in_words
+from bayesglm.report.trace_figures import representative_sweeps
 
 VOID = {"meta", "img", "br", "link", "input", "hr"}
 
@@ -133,6 +138,47 @@ def test_figures_have_their_words(fit: CellFit, page_of: Write) -> None:
     assert "mV" in str(images[0]["alt"])
 
 
+def test_figures_that_check_the_fit_are_folded_away(fit: CellFit, page_of: Write) -> None:
+    page = page_of(fit)
+    text = page.text
+    folded = text.index("Checks of this fit")
+    for title in ("Kernels without each unit", "Prior and posterior", "Chains of the sampler"):
+        assert text.rindex(title) > folded
+    assert text.index("Voltage against current") < folded
+    first, *_ = (one for one in page.all("details") if one.get("class") == "more")
+    assert "open" not in first
+    assert not page.all("script")
+
+
+def test_captions_tell_numbers_and_how_to_judge(fit: CellFit, page_of: Write) -> None:
+    text = page_of(fit).text
+    rows = list(predict_sweeps(fit, also=list(representative_sweeps(fit))).values())
+    residuals = centred_residuals(rows, fit.settings.model)
+    for words in (
+        *moments_in_words(residual_moments(residuals, fit.design.row_ms)),
+        "goes beyond 4 robust sd",
+        "Where it is above 0.8 the data say next to nothing",
+        "A slope means a chain that lies higher or lower",
+    ):
+        assert words in text
+    named = [fit.digest.labels[unit] for unit in most_influential(fit)[:3]]
+    alt = next(str(one["alt"]) for one in page_of(fit).all("img") if "without" in str(one["alt"]))
+    assert alt.endswith(f"Most counts {', '.join(named)}.")
+
+
+def test_figures_that_do_not_apply_are_left_out(
+    noise_fit: CellFit, saved: dict[str, Path], tmp_path: Path
+) -> None:
+    path = tmp_path / "page.html"
+    steps = {f"{name}.svg" for name in ("voltage_current", "by_sweep")}
+    kept = {name: file for name, file in saved.items() if name not in steps}
+    write_page([noise_fit], path, "study", figures={noise_fit.name: kept})
+    page = Page(path.read_text(encoding="utf-8"))
+    assert len(page.all("img")) == len(FIGURES) - 2
+    assert "Voltage against current" not in page.text
+    assert "Drift over the recording" not in page.text
+
+
 def test_tables_have_scopes_and_scroll_by_keyboard(fit: CellFit, page_of: Write) -> None:
     page = page_of(fit, renamed(fit, "b"))
     assert all(head.get("scope") in ("col", "row") for head in page.all("th"))
@@ -164,7 +210,11 @@ def test_several_cells_begin_with_a_summary(
     page = page_of(*cells)
     assert "Of 3 cells 1 passed, 1 with caution and 1 failed." in page.text
     assert "second, drug" in page.text
-    assert [bool("open" in one) for one in page.all("details")] == [True, False, False]
+    assert [bool("open" in one) for one in page.all("details") if one.get("class") != "more"] == [
+        True,
+        False,
+        False,
+    ]
     targets = {str(attrs["id"]) for _, attrs in page.elements if "id" in attrs}
     links = {str(link["href"]).removeprefix("#") for link in page.all("a")}
     assert links <= targets
@@ -185,3 +235,20 @@ def test_saved_figures_are_taken_as_they_are(
     monkeypatch.delattr("bayesglm.report.figures.draw_figures")
     write_page([fit], read, "study", figures={fit.name: saved})
     assert drawn.read_bytes() == read.read_bytes()
+
+
+def test_joined_sweeps_are_told(fit: CellFit, page_of: Write) -> None:
+    (one,) = fit.recordings
+    first, *others = one.sweeps
+    joined = replace(first, joined=((0, 0), (1, 100)))
+    section = fit.settings.recording.model_copy(update={"contiguous": ("0-1",)})
+    told = replace(
+        fit,
+        recordings=(replace(one, sweeps=(joined, *others)),),
+        settings=fit.settings.model_copy(update={"recording": section}),
+    )
+    text = page_of(told).text
+    assert f"{len(one.sweeps)} (joined: 0–1)" in text
+    assert "recording.contiguous" in text
+    assert "joined:" not in page_of(fit).text
+    assert "recording.contiguous" not in page_of(fit).text

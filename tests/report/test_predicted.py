@@ -8,6 +8,7 @@ from made_fit import step_recording
 
 from bayesglm.checks.residuals import SweepRows
 from bayesglm.inference.results import CellFit
+from bayesglm.recording.settings import ModelSection
 from bayesglm.report import predicted
 
 
@@ -24,7 +25,7 @@ def test_autocorrelation_is_that_of_the_noise_whatever_is_masked() -> None:
         noise[i] = 0.9 * noise[i - 1] + drive[i]
     kept = rng.random(len(noise)) > 0.3
     noise[~kept] = np.nan
-    lags, found = predicted.residual_autocorrelation([rows_of(noise + 5, kept)], 1.0, True, 20.0)
+    lags, found = predicted.residual_autocorrelation([noise], 1.0, 20.0)
     np.testing.assert_array_equal(lags, np.arange(21.0))
     np.testing.assert_allclose(found, 0.9**lags, atol=0.03)
 
@@ -32,7 +33,7 @@ def test_autocorrelation_is_that_of_the_noise_whatever_is_masked() -> None:
 def test_autocorrelation_agrees_with_a_plain_loop() -> None:
     rng = np.random.default_rng(1)
     sweeps = [rows_of(rng.normal(size=n), rng.random(n) > 0.2) for n in (60, 41)]
-    _, found = predicted.residual_autocorrelation(sweeps, 1.0, False, 5.0)
+    _, found = predicted.residual_autocorrelation([s.residual for s in sweeps], 1.0, 5.0)
     for lag in range(6):
         pairs = [
             (s.residual[i], s.residual[i + lag])
@@ -45,8 +46,22 @@ def test_autocorrelation_agrees_with_a_plain_loop() -> None:
 
 
 def test_a_perfect_prediction_has_no_correlation() -> None:
-    blank = rows_of(np.zeros(50), np.ones(50, dtype=bool))
-    assert not predicted.residual_autocorrelation([blank], 1.0, True, 10.0)[1].any()
+    assert not predicted.residual_autocorrelation([np.zeros(50)], 1.0, 10.0)[1].any()
+
+
+@pytest.mark.parametrize("drift", [True, False])
+def test_offsets_and_drifts_of_sweeps_are_taken_out(drift: bool) -> None:
+    """Measured: 3 mV and a line; what is left is closed form."""
+    kept = np.arange(200) % 7 > 0
+    slope = 0.01 * (np.arange(200) + 0.5)
+    rows, empty = rows_of(3.0 + slope, kept), rows_of(slope, np.zeros(200, dtype=bool))
+    model = ModelSection(sweep_drift=drift)
+    (found,) = predicted.centred_residuals([rows, empty], model)
+    expected = np.zeros(200) if drift else slope - slope[kept].mean()
+    np.testing.assert_allclose(found[kept], expected[kept], atol=1e-9)
+    assert np.isnan(found[~kept]).all()
+    plain = model.model_copy(update={"sweep_offsets": False})
+    np.testing.assert_allclose(predicted.centred_residuals([rows], plain)[0], rows.residual)
 
 
 def test_many_sweeps_are_thinned_and_wanted_ones_kept(

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import csv
 import json
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from bayesglm.inference.results import CellFit
+from bayesglm.inference.sensitivity import Sensitivity
 from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.report import tables
 
@@ -59,3 +61,38 @@ def test_a_failed_write_leaves_nothing(
     with pytest.raises(OSError, match="no space"):
         tables.write_cell(linear_fit, tmp_path)
     assert list((tmp_path / "cells").iterdir()) == []
+
+
+def test_other_choices_are_written_in_full(linear_fit: CellFit, tmp_path: Path) -> None:
+    folder = tables.write_cell(linear_fit, tmp_path)
+    grid, windows = linear_fit.sensitivity.durations, linear_fit.sensitivity.windows
+    assert grid is not None
+    assert windows is not None
+    with (folder / "durations.csv").open(encoding="utf-8") as file:
+        rows = list(csv.DictReader(file))
+    assert len(rows) == grid.held_out_mV2.size
+    (chosen,) = (row for row in rows if row["chosen"] == "1")
+    assert float(chosen["input_ms"]) == pytest.approx(grid.input_ms[grid.chosen[0]])
+    assert float(chosen["after_spike_ms"]) == pytest.approx(grid.after_spike_ms[grid.chosen[1]])
+    np.testing.assert_allclose(
+        [float(row["held_out_mV2"]) for row in rows], grid.held_out_mV2.ravel(), rtol=1e-8
+    )
+    np.testing.assert_allclose(
+        [float(row["after_spike_at_30ms_sd"]) for row in rows],
+        grid.features["after_spike_at_30ms"][1].ravel(),
+        rtol=1e-8,
+    )
+    with (folder / "spike_window.csv").open(encoding="utf-8") as file:
+        ends = {float(row["window_end_ms"]): row for row in csv.DictReader(file)}
+    assert list(ends) == windows.ends_ms.tolist()
+    assert ends[5.0]["chosen"] == "1"
+    # Inside the window nothing is known: empty, not zero.
+    assert ends[10.0]["after_spike_at_10ms_mean"] == ""
+    at_20ms = windows.features["after_spike_at_20ms"][0][0]
+    assert float(ends[3.0]["after_spike_at_20ms_mean"]) == pytest.approx(at_20ms)
+
+
+def test_choices_that_were_not_varied_are_not_written(linear_fit: CellFit, tmp_path: Path) -> None:
+    folder = tables.write_cell(replace(linear_fit, sensitivity=Sensitivity()), tmp_path)
+    assert not (folder / "durations.csv").exists()
+    assert not (folder / "spike_window.csv").exists()

@@ -45,3 +45,11 @@ def test_the_middle_of_a_long_sweep() -> None:
     assert trace_figures._middle(times, 100.0) == slice(450, 550)
     assert trace_figures._middle(times, 900.0) == slice(0, 1000)
     assert trace_figures._middle(times, np.inf) == slice(0, 1000)
+
+
+def test_joined_sweeps_are_named_by_their_range(noise_fit: CellFit) -> None:
+    (one,) = noise_fit.recordings
+    sweeps = tuple(replace(s, joined=((s.number, 0), (s.number + 9, 10))) for s in one.sweeps)
+    joined = replace(noise_fit, recordings=(replace(one, sweeps=sweeps),))
+    labels = [shown.label for shown in trace_figures.representative_sweeps(joined).values()]
+    assert labels[0].startswith("Sweeps 0–9: ")

@@ -1,0 +1,93 @@
+"""What lies between sweeps: nothing, a gap of known length, or something that nobody states."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Final
+
+import numpy as np
+
+from bayesglm.recording.joining import contiguous_groups
+from bayesglm.recording.recording import FloatArray, Recording
+from bayesglm.recording.settings import Settings
+from bayesglm.recording.timegrid import print_resolution
+from bayesglm.recording.wording import check_command, number, sweeps_in_words
+from bayesglm.verdict import Reason
+
+_APART: Final = "what happened between sweeps is unknown, so they count as apart"
+
+
+def gaps_row(recording: Recording, settings: Settings) -> Reason:
+    """Row ``gaps`` of the check: which sweeps are joined, and what lies between the others.
+
+    Parameters
+    ----------
+    recording
+        The recording, its sweeps as in the file.
+    settings
+        Which sweeps are declared to follow on each other.
+    """
+    n = len(recording.sweeps)
+    limit = "no sweep begins before another ends"
+    if n == 1:
+        return Reason("gaps", "one sweep", limit)
+    chains = _chains(recording, contiguous_groups(recording, settings.recording))
+    joined = _joined_in_words(recording, chains)
+    if any(sweep.start_s is None for sweep in recording.sweeps):
+        return Reason(
+            "gaps",
+            "; ".join(filter(None, (joined, "starts of the sweeps are not stated"))),
+            limit,
+            advice=f"{_APART}; where they follow without a gap, name them in "
+            "recording.contiguous, or give the file a column sweep_start_s",
+        )
+    if len(chains) == 1:
+        return Reason("gaps", joined, limit)
+    gaps = _gaps_s(recording, chains)
+    starts = np.array([sweep.start_s for sweep in recording.sweeps], dtype=np.float64)
+    if gaps.min() < -print_resolution(starts) - recording.step_ms / 2e3:
+        return Reason(
+            "gaps",
+            f"by the stated starts, sweeps overlap by up to {number(-gaps.min(), 3)} s",
+            limit,
+            "caution",
+            "the starts are wrong: correct sweep_start_s, or leave the column out",
+            check_command(recording),
+        )
+    # An overlap that is left is the rounding of the starts.
+    shortest, longest = (f"{max(value, 0.0):.3g}" for value in (gaps.min(), gaps.max()))
+    span = shortest if shortest == longest else f"{shortest} to {longest}"
+    between = f"{span} s between {'the others' if joined else 'sweeps'}"
+    return Reason("gaps", "; ".join(filter(None, (joined, between))), limit, advice=_APART)
+
+
+def _chains(recording: Recording, joined: Sequence[tuple[int, ...]]) -> tuple[tuple[int, ...], ...]:
+    """Indices of the sweeps of each stretch, those that are not joined alone."""
+    in_chain = {index for chain in joined for index in chain}
+    alone = [(index,) for index in range(len(recording.sweeps)) if index not in in_chain]
+    return tuple(sorted([*(chain for chain in joined if len(chain) > 1), *alone]))
+
+
+def _joined_in_words(recording: Recording, chains: Sequence[tuple[int, ...]]) -> str:
+    names = [
+        sweeps_in_words([recording.sweeps[index].number for index in chain])
+        for chain in chains
+        if len(chain) > 1
+    ]
+    if not names:
+        return ""
+    return f"{' and '.join(names)} follow without a gap and are joined"
+
+
+def _gaps_s(recording: Recording, chains: Sequence[tuple[int, ...]]) -> FloatArray:
+    """Time from the end of each stretch to the next that begins, s; negative where they overlap."""
+    starts, ends = [], []
+    for chain in chains:
+        first, last = recording.sweeps[chain[0]], recording.sweeps[chain[-1]]
+        assert first.start_s is not None
+        assert last.start_s is not None
+        starts.append(first.start_s)
+        ends.append(last.start_s + last.n_samples * recording.step_ms / 1e3)
+    order = np.argsort(starts, kind="stable")
+    gaps: FloatArray = np.asarray(starts)[order][1:] - np.asarray(ends)[order][:-1]
+    return np.round(gaps, 6)  # beyond a microsecond it is the rounding of the starts
