@@ -7,6 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from bayesglm.checks.residuals import linearity
+from bayesglm.checks.shape import shape_misfit
 from bayesglm.checks.splits import FEWEST_UNITS, exciting_units
 from bayesglm.fitting.posterior import Posterior
 from bayesglm.fitting.summary import Summary
@@ -59,6 +60,10 @@ def judge(
             {name: summary.kernels[name].prior_share[at] for name, at in known.items()}, commands
         ),
     ]
+    reasons += [
+        diagnose.shape_reason(kernel, misfit, _with_splines(kernel, recordings, settings))
+        for kernel, misfit in shape_misfit(posterior.design, calibration, mean).items()
+    ]
     if settings.model.noise == "white":
         reasons.append(_white_reason(commands))
     return Verdict(
@@ -98,6 +103,13 @@ def _shown(split: Split) -> tuple[str, str, str, int]:
             lag = name.removeprefix(prefix).removesuffix("ms")
             return name, f"η({lag} ms)", "mV", 1
     return "after_spike_minimum", "minimum of η", "mV", 1
+
+
+def _with_splines(kernel: str, recordings: Sequence[Recording], settings: Settings) -> str:
+    """The fit with a kernel of splines."""
+    section = getattr(settings.kernels, kernel).model_copy(update={"basis": "splines"})
+    kernels = settings.kernels.model_copy(update={kernel: section})
+    return fit_command(recordings, "", settings.model_copy(update={"kernels": kernels}), "splines")
 
 
 def _white_reason(commands: diagnose.Commands) -> Reason:

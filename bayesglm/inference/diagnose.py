@@ -310,6 +310,33 @@ def linearity_reason(share: float, commands: Commands) -> Reason:
     )
 
 
+def shape_reason(kernel: str, misfit: float, command: str) -> Reason:
+    """Row on a kernel of exponentials: whether the data have that shape.
+
+    Parameters
+    ----------
+    kernel
+        Name of the kernel.
+    misfit
+        Distance of least squares from it, in sds.
+    command
+        Fit with splines instead.
+    """
+    bad = misfit > _DISAGREEMENT_LIMIT
+    return Reason(
+        f"shape_{kernel}",
+        f"least squares lies {misfit:.1f} sd from the exponentials",
+        f"≤ {_DISAGREEMENT_LIMIT:g}",
+        _grade(not bad),
+        *_when(
+            bad,
+            f"the {KERNEL_SIGNS[kernel]} is no sum of so few exponentials, and its band does not "
+            "know of that; add terms or fit splines",
+            command,
+        ),
+    )
+
+
 def prior_reasons(shares: dict[str, FloatArray], commands: Commands) -> list[Reason]:
     """Rows on how much of each kernel the data set."""
     reasons = []

@@ -6,7 +6,7 @@ A kernel is ``k(s) = Σ_j w_j B_j(s)``. Four bases are offered:
   fast, coarse where they decay. The last spline is left out, so that the kernel ends at zero.
 - ``cosines``: raised cosines, evenly spaced on the same axis, each four spacings wide. The kernel
   ends at zero.
-- ``lags``: one coefficient a lag, or a bin of lags.
+- ``lags``: one coefficient a lag, a straight line between them where they are far apart.
 - ``exponentials``: ``Σ_i a_i exp(−s/τ_i)``. The columns are B-splines, all of them, on which
   sums of exponentials are a constraint; see `kernels.exponentials`.
 """
@@ -21,7 +21,7 @@ import numpy as np
 from scipy.interpolate import BSpline
 
 from bayesglm.errors import InputError
-from bayesglm.recording.recording import FloatArray, IntArray
+from bayesglm.recording.recording import FloatArray
 from bayesglm.recording.settings import Basis
 
 _DEGREE = 3
@@ -47,21 +47,21 @@ class KernelSpec:
     duration_ms
         Lag at which the kernel ends, ms.
     weights
-        Number of weights: splines, cosines or bins of lags.
+        Number of weights: splines, cosines or lags.
     warp_ms
         Scale s0 of the warp ``log(1 + s/s0)``, ms.
     basis
         What the kernel is made of.
     finest_ms
-        Of lags and exponentials: the finest lag that is told apart, the length of a row, ms. Bins
-        of lags are whole multiples of it, and no time constant is shorter.
+        Of lags and exponentials: the finest lag that is told apart, the length of a row, ms. Lags
+        are whole multiples of it, and no time constant is shorter.
     terms
         Number of exponentials.
 
     Raises
     ------
     InputError
-        If the duration or the warp is not positive, there are too few weights, more bins than
+        If the duration or the warp is not positive, there are too few weights, more weights than
         lags, no finest lag where one is needed, or no exponential.
     """
 
@@ -95,8 +95,8 @@ class KernelSpec:
             )
         if self.basis == "lags" and self.weights > self.finest_lags:
             raise InputError(
-                f"kernel of {self.weights} bins of at least {self.finest_ms:g} ms in "
-                f"{self.duration_ms:g} ms; expected at most {self.finest_lags} bins"
+                f"kernel of {self.weights} lags at least {self.finest_ms:g} ms apart in "
+                f"{self.duration_ms:g} ms; expected at most {self.finest_lags} lags"
             )
 
     @property
@@ -125,7 +125,8 @@ class KernelSpec:
         if self.basis == "cosines":
             return np.append(self._cosine_centres, 1.0)
         if self.basis == "lags":
-            return np.append(self.warp((self.edges_ms[1:] + self.edges_ms[:-1]) / 2), 1.0)
+            # The kernel ends with its duration: it is zero one lag later.
+            return self.warp(np.append(self.edges_ms[1:], self.duration_ms + self.finest_ms))
         # Greville abscissae: means of three knots.
         knots = self._spline.t
         return np.array(
@@ -134,10 +135,10 @@ class KernelSpec:
 
     @cached_property
     def edges_ms(self) -> FloatArray:
-        """Edges of the bins of lags, ms, shape (weights + 1,): the first 0, the last the duration.
+        """The lags that have a coefficient, and 0 before them, ms, shape (weights + 1,).
 
-        Bins are one `finest_ms` wide as long as bins that are even on the warped axis would be
-        narrower. All but the last edge are whole multiples of `finest_ms`.
+        They are one `finest_ms` apart as long as lags that are even on the warped axis would be
+        nearer. All but the last, the duration, are whole multiples of `finest_ms`.
         """
         n, finest = self.weights, self.finest_ms
         for narrow in range(n):
@@ -187,13 +188,38 @@ class KernelSpec:
 
     def _inside(self, lags: FloatArray) -> FloatArray:
         if self.basis == "lags":
-            bins: IntArray = np.searchsorted(self.edges_ms[1:] * (1 + _SAME_LAG), lags)
-            return np.eye(self.weights)[bins]
+            return self._lines(lags)
         places = np.minimum(self.warp(lags), 1.0)
         if self.basis == "cosines":
             return self._cosines(places)
         values: FloatArray = self._spline(places)[:, : self.weights]
         return values
+
+    def _lines(self, lags: FloatArray) -> FloatArray:
+        """Straight lines between the lags with a coefficient; constant before the first."""
+        last = self.weights - 1
+        place = np.interp(lags, self.edges_ms[1:], np.arange(self.weights))
+        left = np.minimum(place.astype(np.int64), max(last - 1, 0))
+        share, each = (place - left)[:, None], np.eye(self.weights)
+        lines: FloatArray = (1 - share) * each[left] + share * each[np.minimum(left + 1, last)]
+        return lines
+
+    def bins(self, lags_ms: FloatArray) -> FloatArray:
+        """Which of the intervals between the edges each lag lies in, closed on the right.
+
+        Parameters
+        ----------
+        lags_ms
+            Lags above 0 and at most the duration, shape (n,), ms.
+
+        Returns
+        -------
+        Array of zeros and ones, shape (n, weights).
+        """
+        inside: FloatArray = np.eye(self.weights)[
+            np.searchsorted(self.edges_ms[1:] * (1 + _SAME_LAG), lags_ms)
+        ]
+        return inside
 
     def _cosines(self, places: FloatArray) -> FloatArray:
         spacing, centres = 1.0 / (self.weights - 1), self._cosine_centres

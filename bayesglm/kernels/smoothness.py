@@ -8,7 +8,7 @@ at zero; a weak ridge makes the prior proper there.
 
 A kernel that is large at short lags and small at long ones bends much more early than late, and a
 prior with one sd for all lags would iron out the early part. Where a kernel *falls*, the prior is
-put on ``k(s)·(1 + s/s0)`` instead: its sd then falls as ``1/(1 + s/s0)``.
+put on ``k(s)·√(1 + s/s0)`` instead: its sd then falls as ``1/√(1 + s/s0)``.
 """
 
 from __future__ import annotations
@@ -22,6 +22,9 @@ from bayesglm.recording.recording import FloatArray
 
 #: Prior sd along the free direction, in multiples of the half-normal scale of the kernel's sd.
 RIDGE_FACTOR = 2.0
+
+#: A kernel that falls has a prior sd that falls as ``(1 + s/s0)`` to minus this power.
+_FALL_POWER = 0.5
 
 _GRID = 400
 
@@ -56,7 +59,7 @@ def smoothness_prior(spec: KernelSpec, falls: bool = False) -> SmoothnessPrior:
     spec
         The kernel's shape.
     falls
-        Whether the prior sd falls with the lag as ``1/(1 + s/s0)``.
+        Whether the prior sd falls with the lag as ``1/√(1 + s/s0)``.
 
     Returns
     -------
@@ -69,7 +72,8 @@ def smoothness_prior(spec: KernelSpec, falls: bool = False) -> SmoothnessPrior:
     # clamped ends or rounded to rows, hence divided differences: a straight line on the warped
     # axis must be free of penalty.
     centres = spec.centres
-    lift = np.exp(centres * np.log1p(spec.duration_ms / spec.warp_ms)) if falls else np.ones(n + 1)
+    rise = _FALL_POWER * np.log1p(spec.duration_ms / spec.warp_ms)
+    lift = np.exp(rise * centres) if falls else np.ones(n + 1)
     differences = (_divided_second_differences(centres) * lift)[:, :n]
     free = ((1.0 - centres) / lift)[:n, None]
     lags = spec.unwarp(np.linspace(0, 1, _GRID, endpoint=False))
@@ -80,7 +84,7 @@ def smoothness_prior(spec: KernelSpec, falls: bool = False) -> SmoothnessPrior:
     bends = np.linalg.pinv(differences)
     # It is orthogonal to the free direction as vectors of weights, which depends on where weights
     # crowd. Kernels that are orthogonal on the axis do not.
-    lifted = basis * (1.0 + lags[:, None] / spec.warp_ms) if falls else basis
+    lifted = basis * (1.0 + lags[:, None] / spec.warp_ms) ** _FALL_POWER if falls else basis
     line = lifted @ free
     bends = bends - free @ (line.T @ (lifted @ bends)) / np.sum(line**2)
     return SmoothnessPrior(

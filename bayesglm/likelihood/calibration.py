@@ -26,11 +26,13 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from scipy.stats import norm
 from scipy.stats import t as student_t
 
+from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.clusters import stimulus_clusters
 from bayesglm.likelihood.digest import VoltageDigest
@@ -38,6 +40,11 @@ from bayesglm.likelihood.jackknife import MAX_LEVERAGE, UnitCount, jackknife, sa
 from bayesglm.likelihood.least_squares import RANK_TOLERANCE, LeastSquares, spectral_covariance
 from bayesglm.likelihood.offsets import effect_columns, effect_products, shrinkage, sweep_sums
 from bayesglm.recording.recording import FloatArray, IntArray
+
+#: The spread between units is held against the spectrum on kernels of so many splines, …
+_RATIO_WEIGHTS = 14
+#: … on a grid of so many lags, even on the warped axis.
+_GRID = 400
 
 
 @dataclass(frozen=True, eq=False)
@@ -236,8 +243,8 @@ def _kernel_ratio(
     design: VoltageDesign, fit: LeastSquares, jackknife: FloatArray, spectral: FloatArray
 ) -> dict[str, float]:
     ratios = {}
-    for name in design.kernels:
-        rows = fit.basis[design.columns[name]]
+    for name, spec in design.kernels.items():
+        rows = _on_splines(spec) @ fit.basis[design.columns[name]]
         expected, found = rows @ spectral @ rows.T, rows @ jackknife @ rows.T
         # Scaled to unit diagonal, so that what counts as excited does not depend on units.
         sd = np.sqrt(np.diagonal(expected))
@@ -248,6 +255,21 @@ def _kernel_ratio(
         ratio = np.trace(white.T @ found @ white) / np.count_nonzero(kept)
         ratios[name] = float(np.sqrt(ratio))
     return ratios
+
+
+@lru_cache(maxsize=32)
+def _on_splines(spec: KernelSpec) -> FloatArray:
+    """Weights of a kernel as those of the nearest kernel of a few splines, shape (n, weights).
+
+    The ratio is a mean over directions. What units differ by is smooth; over hundreds of weights it
+    would be thinned out.
+    """
+    few = KernelSpec(spec.duration_ms, min(_RATIO_WEIGHTS, spec.weights), spec.warp_ms)
+    if spec == few:
+        return np.eye(spec.weights)
+    lags = spec.unwarp(np.linspace(0.0, 1.0, _GRID + 1)[1:-1])
+    projection: FloatArray = np.linalg.pinv(few.evaluate(lags)) @ spec.evaluate(lags)
+    return projection
 
 
 def _inflated(

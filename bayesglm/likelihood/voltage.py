@@ -304,7 +304,7 @@ def _electrode_columns(
     same = row_means(current, m)[:, None]
     if design.electrode_kernel is None:
         return same
-    bins = design.electrode_kernel.evaluate(design.electrode_kernel.lags(step_ms))
+    bins = design.electrode_kernel.bins(design.electrode_kernel.lags(step_ms))
     past = np.concatenate([np.full(len(bins), current[0]), current])
     delayed = np.zeros((len(same), bins.shape[1]))
     for k, share in enumerate(bins / bins.sum(axis=0), start=1):

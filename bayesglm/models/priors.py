@@ -253,7 +253,7 @@ def _kernel_rows(name: str, scale: float, spec: KernelSpec, falls: bool) -> list
             ),
             PriorRow(f"amplitudes of {sign}", f"normal(0, {RIDGE_FACTOR * scale:g})", unit, reason),
         ]
-    falling = f" of {sign}(s)·(1 + s/s0)" if falls else ""
+    falling = f" of {sign}(s)·√(1 + s/s0)" if falls else ""
     return [
         PriorRow(f"sd of {sign}", f"half-normal({scale:g})", unit, reason),
         PriorRow(

@@ -112,15 +112,15 @@ class KernelSection(Section):
     )
     basis: Basis = Field(
         default="splines",
-        description="B-splines, raised cosines, one coefficient a lag (or bin of lags), or a sum "
-        "of exponentials whose time constants are fitted too",
+        description="B-splines, raised cosines, one coefficient a lag, or a sum of exponentials "
+        "whose time constants are fitted too",
     )
     weights: int | None = Field(
         default=None,
         ge=5,
         le=400,
         description="number of weights; default 14 splines (which carry exponentials too) or "
-        "cosines, 60 bins of lags (at most one a row); up to 60, of lags up to 400",
+        "cosines, 60 lags (at most one a row); up to 60, of lags up to 400",
     )
     warp_ms: float = Field(
         default=2.0,

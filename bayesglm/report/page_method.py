@@ -147,7 +147,7 @@ def _basis(spec: KernelSpec) -> str:
     if spec.basis == "lags":
         if spec.weights == spec.finest_lags:
             return f"one coefficient for each {spec.finest_ms:g} ms of lag"
-        return f"bins of lags, at least {spec.finest_ms:g} ms wide, even in {axis}"
+        return f"lags at least {spec.finest_ms:g} ms apart, even in {axis}"
     return {
         "splines": f"B-splines, knots even in {axis}",
         "cosines": f"raised cosines, even in {axis}",

@@ -50,6 +50,7 @@ _CHECKS: Final = {
     "odd_even": "Odd against even units",
     "drive_split": "Ranges of drive",
     "prior_share": "Share of the prior",
+    "shape": "Shape of exponentials",
     "one_unit_decides": "Weight of one unit",
     "durations": "Durations of the kernels",
     "spike_window": "End of the spike window",
@@ -96,7 +97,12 @@ def percent(level: float) -> str:
 
 
 def probability(value: float) -> str:
-    """Write a probability with two decimals, never as 0 or 1: draws cannot tell these."""
+    """Write a probability with two decimals, never as 0 or 1: draws cannot tell these.
+
+    "–" where there is none.
+    """
+    if not math.isfinite(value):
+        return "–"
     if value < 0.01:
         return "below 0.01"
     return "above 0.99" if value > 0.99 else f"{value:.2f}"

@@ -83,7 +83,7 @@ def test_cosines_of_one_height_are_a_plateau() -> None:
 @pytest.mark.parametrize("duration", [300.0, 57.3, 100.0, 20.0])
 @pytest.mark.parametrize("row", [0.5, 0.6, 1.0])
 @pytest.mark.parametrize("weights", [1, 5, 20, 60, 10**6])
-def test_bins_of_lags_are_whole_rows_that_widen_and_none_is_empty(
+def test_lags_are_whole_rows_that_widen_and_none_is_idle(
     duration: float, row: float, weights: int
 ) -> None:
     weights = min(weights, int(duration / row + 1e-9))
@@ -94,20 +94,27 @@ def test_bins_of_lags_are_whole_rows_that_widen_and_none_is_empty(
     np.testing.assert_allclose(rows, rows.round(), atol=1e-9)
     assert np.all(np.diff(edges) > row * (1 - 1e-9))
     assert np.all(np.diff(rows) > -1.5)
-    values = spec.evaluate(spec.lags(row / 5))
-    np.testing.assert_array_equal(values.sum(axis=1), 1.0)
-    assert values.any(axis=0).all()
+    for values in (spec.evaluate(spec.lags(row / 5)), spec.bins(spec.lags(row / 5))):
+        np.testing.assert_allclose(values.sum(axis=1), 1.0, atol=1e-12)
+        assert values.any(axis=0).all()
 
 
 def test_one_coefficient_for_every_row_of_lag() -> None:
-    """Bins are closed on the right: a kernel of K lags has K coefficients."""
+    """A kernel of K lags has K coefficients, with straight lines between them."""
     spec = KernelSpec(50.0, 100, 2.0, "lags", 0.5)
-    np.testing.assert_array_equal(spec.evaluate(spec.lags(0.5)), np.eye(100))
-    fine = spec.evaluate(spec.lags(0.1))
-    np.testing.assert_array_equal(fine, np.repeat(np.eye(100), 5, axis=0))
+    np.testing.assert_allclose(spec.evaluate(spec.lags(0.5)), np.eye(100), atol=1e-9)
+    weights = np.random.default_rng(0).normal(size=100)
+    fine = spec.lags(0.1)
+    expected = np.interp(fine, spec.lags(0.5), weights)
+    np.testing.assert_allclose(spec.evaluate(fine) @ weights, expected, atol=1e-9)
 
 
-def test_few_bins_are_even_on_the_warped_axis() -> None:
+def test_bins_are_closed_on_the_right() -> None:
+    spec = KernelSpec(50.0, 100, 2.0, "lags", 0.5)
+    np.testing.assert_array_equal(spec.bins(spec.lags(0.1)), np.repeat(np.eye(100), 5, axis=0))
+
+
+def test_few_lags_are_even_on_the_warped_axis() -> None:
     spec = KernelSpec(300.0, 12, 20.0, "lags", 0.1)
     places = spec.warp(spec.edges_ms)
     np.testing.assert_allclose(np.diff(places), 1 / 12, atol=0.01)
@@ -183,7 +190,7 @@ def test_refuses_impossible_kernels(
     [
         ((100.0, 14, 2.0, "lags"), "finest_ms 0; expected the length of a row, above 0"),
         ((100.0, 14, 2.0, "exponentials"), "finest_ms 0; expected the length of a row"),
-        ((100.0, 201, 2.0, "lags", 0.5), "201 bins .* 100 ms; expected at most 200 bins"),
+        ((100.0, 201, 2.0, "lags", 0.5), "201 lags .* 100 ms; expected at most 200 lags"),
         ((100.0, 0, 2.0, "lags", 0.5), "0 weights; expected at least 1"),
         (
             (100.0, 14, 2.0, "exponentials", 0.5, 0),

@@ -165,7 +165,7 @@ def test_bins_of_the_electrode_are_equal_to_a_step(
     duration: float, step: float, counts: list[int]
 ) -> None:
     spec = electrode_spec(duration, step)
-    assert spec.evaluate(spec.lags(step)).sum(axis=0).tolist() == counts
+    assert spec.bins(spec.lags(step)).sum(axis=0).tolist() == counts
 
 
 def test_refuses_an_electrode_kernel_shorter_than_a_step() -> None:

@@ -56,11 +56,9 @@ def test_bends_leave_the_straight_line_free_and_the_ridge_holds_it(weights: int)
 
 @pytest.mark.parametrize(("basis", "weights"), BASES)
 def test_a_straight_line_is_nearly_free_in_every_basis(basis: Basis, weights: int) -> None:
-    """Against a bend of the same height, 4x(1 − x); bins of lags have the value at their middle."""
+    """Against a bend of the same height, 4x(1 − x)."""
     spec = KernelSpec(300.0, weights, 2.0, basis, 0.5)
     x = np.linspace(0, 1, 3000, endpoint=False)
-    if basis == "lags":
-        x = spec.warp((spec.edges_ms[1:] + spec.edges_ms[:-1]) / 2)
     rows = spec.evaluate(spec.unwarp(x))
     line = np.linalg.lstsq(rows, 1 - x, rcond=None)[0]
     bend = np.linalg.lstsq(rows, 4 * x * (1 - x), rcond=None)[0]
@@ -119,10 +117,7 @@ def test_covariance_scales_with_sd_and_scale() -> None:
 def test_the_kernels_prior_sd_is_the_same_in_every_basis(
     basis: Basis, weights: int, falls: bool
 ) -> None:
-    """Away from the ends, against 14 splines, within 15 %.
-
-    A bin of lags has one value: it is held against the splines at its middle.
-    """
+    """Away from the ends, against 14 splines, within 15 %."""
 
     def sds(spec: KernelSpec, lags: np.ndarray) -> np.ndarray:
         covariance, rows = smoothness_prior(spec, falls).covariance(1.0, 0.5), spec.evaluate(lags)
@@ -130,8 +125,6 @@ def test_the_kernels_prior_sd_is_the_same_in_every_basis(
 
     spec = KernelSpec(300.0, weights, 2.0, basis, 0.5)
     lags = spec.unwarp(np.linspace(0.05, 0.93, 40))
-    if basis == "lags":
-        lags = np.unique(spec.unwarp(spec.centres[:-1])[spec.evaluate(lags).argmax(axis=1)])
     np.testing.assert_allclose(sds(spec, lags), sds(KernelSpec(300.0), lags), rtol=0.15)
 
 
@@ -154,7 +147,8 @@ def test_a_falling_prior_falls_whatever_the_knots(weights: int) -> None:
 
     np.testing.assert_allclose(sds(weights, True), sds(14, True), rtol=0.15)
     falling, level = sds(weights, True), sds(weights, False)
-    assert falling[-1] / falling[0] < 0.1 * level[-1] / level[0]
+    # √(1 + s/s0) grows 7-fold from 1 to 150 ms.
+    assert falling[-1] / falling[0] < 0.25 * level[-1] / level[0]
 
 
 @pytest.mark.parametrize("weights", [8, 14, 30])

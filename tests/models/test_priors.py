@@ -93,7 +93,7 @@ def test_table_of_exponentials_and_of_an_electrode_kernel() -> None:
     assert rows["amplitudes of η"].prior == "normal(0, 20)"
     assert rows["2 time constants of η"].prior.endswith("from 0.5 to 100")
     assert "sd of η" not in rows
-    assert "(1 + s/s0)" not in rows["bends of κ"].prior
+    assert "√(1 + s/s0)" not in rows["bends of κ"].prior
     assert rows["electrode, each of 5 lags"].prior == "normal(0, 50/√5)"
     prior = weight_prior(design, PriorsSection())
     total = np.zeros(design.n_weights)
