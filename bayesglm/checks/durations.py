@@ -160,7 +160,7 @@ def hold_out_groups(digest: VoltageDigest) -> tuple[IntArray, IntArray]:
     """
     stimulus = stimulus_clusters(digest)
     # A sweep is known by the stimuli of its blocks.
-    currents = [tuple(stimulus[digest.sweep == s].tolist()) for s in digest.sweep]
+    currents = [tuple(digest.stimulus[digest.sweep == s].tolist()) for s in digest.sweep]
     known = {current: k for k, current in enumerate(dict.fromkeys(currents))}
     if len(known) >= _FEWEST_SWEEPS:
         groups = np.array([known[current] for current in currents])

@@ -20,7 +20,7 @@ from bayesglm.inference.setup import nominal_unit_ms, resolve_design, settle
 from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.likelihood.voltage import voltage_digest
 from bayesglm.models.priors import WeightPrior, weight_prior
-from bayesglm.recording.joining import join_contiguous
+from bayesglm.recording.loading import join
 from bayesglm.recording.recording import FloatArray, Recording
 from bayesglm.recording.selection import refuse_defects
 from bayesglm.recording.settings import Settings
@@ -162,7 +162,7 @@ def _digest(recordings: Sequence[Recording], settings: Settings) -> VoltageDiges
             refuse_defects(recording)
     except InputError:
         return "missing values or jumps in time"
-    joined = [join_contiguous(recording, settings.recording) for recording in recordings]
+    joined = [join(recording, settings.recording) for recording in recordings]
     design = resolve_design(joined, settings)
     settled = settle(joined, design.input.duration_ms, settings)
     return voltage_digest(settled, design, nominal_unit_ms(settled, settings))

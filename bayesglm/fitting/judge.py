@@ -43,9 +43,8 @@ def judge(
     commands = _commands(recordings, digest, summary, settings)
     sampler = diagnose.summarise_sampler(posterior.chains, posterior.weights)
     correlation_ms = correlation_time_ms(digest, calibration.fit)
-    drifts = bool(np.any(calibration.fit.sweep_variances[1:] > 0))
     mean = posterior.flat.mean(axis=0)
-    bent = linearity(recordings, posterior.design, mean, correlation_ms, drifts)
+    bent = linearity(recordings, posterior.design, mean, correlation_ms, calibration.fit.drifts)
     known = {name: np.isfinite(summary.kernels[name].mean) for name in posterior.design.kernels}
     reasons = [
         *diagnose.sampler_reasons(sampler, commands),
@@ -73,7 +72,7 @@ def judge(
         units=calibration.units.clusters,
         effective_units=calibration.units.effective,
         calibration_ratio=calibration.ratio,
-        route="least squares, calibrated" if settings.model.noise == "calibrated" else "white",
+        route=_route(settings, posterior.chains.sampler),
         rhat_max=sampler.rhat_max,
         ess_min=sampler.ess_min,
         divergences=sampler.divergences,
@@ -110,6 +109,12 @@ def _with_splines(kernel: str, recordings: Sequence[Recording], settings: Settin
     section = getattr(settings.kernels, kernel).model_copy(update={"basis": "splines"})
     kernels = settings.kernels.model_copy(update={kernel: section})
     return fit_command(recordings, "", settings.model_copy(update={"kernels": kernels}), "splines")
+
+
+def _route(settings: Settings, sampler: str) -> str:
+    """How the posterior came about, in words."""
+    noise = "least squares, calibrated" if settings.model.noise == "calibrated" else "white"
+    return f"{noise}; {sampler}"
 
 
 def _white_reason(commands: diagnose.Commands) -> Reason:

@@ -19,8 +19,9 @@ from bayesglm.inference.setup import make_digest, resolve_design, settle
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.calibration import calibrate
 from bayesglm.models.priors import weight_prior
-from bayesglm.recording.loading import load_cell
+from bayesglm.recording.loading import join, load_cell
 from bayesglm.recording.recording import Recording
+from bayesglm.recording.selection import refuse_defects
 from bayesglm.recording.settings import Settings
 from bayesglm.recording.study import CellEntry, Study
 
@@ -80,10 +81,14 @@ def fit(
     Raises
     ------
     InputError
-        If the recordings cannot be fitted: kernels longer than the sweeps, nothing left.
+        If the recordings cannot be fitted: missing values or jumps in time in what is used,
+        kernels longer than the sweeps, nothing left.
     """
     settings = settings or Settings()
     recordings = (recordings,) if isinstance(recordings, Recording) else tuple(recordings)
+    for recording in recordings:
+        refuse_defects(recording)
+    recordings = tuple(join(recording, settings.recording) for recording in recordings)
     entry = entry or CellEntry(name=recordings[0].name, recordings=())
     clock = _Clock(progress or (lambda _: None))
     # With two BLAS threads and a busy neighbour small products were seen to take seconds.

@@ -75,12 +75,15 @@ class SamplerSummary:
         Smallest energy Bayesian fraction of missing information of the chains.
     divergences
         Number of divergent transitions.
+    sampler
+        How the draws were made.
     """
 
     rhat_max: float
     ess_min: float
     bfmi_min: float
     divergences: int
+    sampler: str = "NUTS"
 
 
 def summarise_sampler(chains: Chains, weights: FloatArray) -> SamplerSummary:
@@ -89,7 +92,7 @@ def summarise_sampler(chains: Chains, weights: FloatArray) -> SamplerSummary:
     Parameters
     ----------
     chains
-        The NUTS run.
+        The run.
     weights
         Exact draws of the weights, shape (chains, draws, P).
     """
@@ -113,14 +116,15 @@ def summarise_sampler(chains: Chains, weights: FloatArray) -> SamplerSummary:
         ess_min=float(min(np.min(bulk), np.min(tail))),
         bfmi_min=float(np.min(bfmi)),
         divergences=int(chains.diverging.sum()),
+        sampler=chains.sampler,
     )
 
 
 def sampler_reasons(summary: SamplerSummary, commands: Commands) -> list[Reason]:
-    """Rows on the sampler."""
+    """Rows on the sampler; divergences and energy are those of NUTS alone."""
     advice = "the chains have not settled; run them longer"
     # Asked so that NaN, as of a chain that never moved, is on the bad side of every limit.
-    return [
+    settled = [
         Reason(
             "rhat",
             f"{summary.rhat_max:.3f}",
@@ -135,6 +139,11 @@ def sampler_reasons(summary: SamplerSummary, commands: Commands) -> list[Reason]
             _grade(summary.ess_min > _ESS_LIMIT, not summary.ess_min >= _ESS_FAILED),
             *_when(not summary.ess_min > _ESS_LIMIT, advice, commands.more_draws),
         ),
+    ]
+    if summary.sampler != "NUTS":
+        return settled
+    return [
+        *settled,
         Reason(
             "divergences",
             str(summary.divergences),
@@ -198,8 +207,8 @@ def _units_in_words(units: UnitCount, freedom: float, n_units: int) -> str:
     worth = f"worth {units.effective:.1f} equal ones"
     if units.repeated:
         said = (
-            f"{n_units} units of {units.clusters} different currents, {worth}: clustered by "
-            "current and by sweep"
+            f"{n_units} units of {units.clusters} different currents, {worth}: repeats of a "
+            "current count as one"
         )
     else:
         said = f"{units.clusters} independent units, {worth}"

@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import partial
-from typing import Any
+from typing import Any, Literal
 
 import jax
 import jax.numpy as jnp
@@ -26,7 +26,7 @@ from bayesglm.recording.settings import SamplingSection
 
 @dataclass(frozen=True, eq=False)
 class Chains:
-    """Draws of a NUTS run.
+    """Draws of a run.
 
     Attributes
     ----------
@@ -39,7 +39,9 @@ class Chains:
     accept_prob
         Mean acceptance probability of each step, shape (chains, draws).
     n_steps
-        Leapfrog steps, shape (chains, draws).
+        Leapfrog steps, or evaluations of the density, shape (chains, draws).
+    sampler
+        How they were drawn; only NUTS can diverge.
     """
 
     draws: dict[str, FloatArray]
@@ -47,6 +49,7 @@ class Chains:
     energy: FloatArray
     accept_prob: FloatArray
     n_steps: IntArray
+    sampler: Literal["NUTS", "slices"] = "NUTS"
 
     @property
     def time_constants(self) -> dict[str, FloatArray]:

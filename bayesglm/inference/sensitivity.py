@@ -105,8 +105,10 @@ class SpikeWindows:
         either: the sd is the yardstick of what the reader is told, and this is no test.
         """
         mean, sd = self.features[feature]
-        distance: FloatArray = np.abs(mean - mean[self.chosen]) / np.maximum(sd, sd[self.chosen])
-        return distance
+        distance, larger = np.abs(mean - mean[self.chosen]), np.maximum(sd, sd[self.chosen])
+        # At its end a kernel is pinned to zero, where nothing can move.
+        nan = np.full_like(distance, np.nan)
+        return np.divide(distance, larger, out=nan, where=larger > 0)
 
 
 @dataclass(frozen=True, eq=False)

@@ -193,7 +193,7 @@ def make_digest(
     fit = fit_digest(digest, prior.root, settings)
     if block_ms is not None and settings.model.block_ms is None:
         tau_ms = correlation_time_ms(digest, fit)
-        factor = int(np.ceil(INDEPENDENT_TIMES * tau_ms / block_ms))
+        factor = max(1, int(np.ceil(INDEPENDENT_TIMES * tau_ms / block_ms)))
         if digest.n_units / factor < _FEWEST_BLOCKS:
             shortest = int(np.ceil(_FEWEST_TIMES * tau_ms / block_ms))
             factor = min(factor, max(shortest, digest.n_units // _FEWEST_BLOCKS, 1))
@@ -224,7 +224,7 @@ def _mostly_constant(recording: Recording) -> bool:
 def _spec(section: KernelSection, duration_ms: float, row_ms: float) -> KernelSpec:
     weights = section.weights or DEFAULT_WEIGHTS[section.basis]
     if section.basis == "lags":
-        # No more bins than rows of lag.
+        # No more lags than rows.
         weights = min(weights, max(1, int(duration_ms / row_ms + 1e-9)))
     return KernelSpec(duration_ms, weights, section.warp_ms, section.basis, row_ms, section.terms)
 

@@ -52,7 +52,7 @@ def coordinate_slices(
     Returns
     -------
     Chains
-        Nothing diverges; the energy is the negative log density, and a step an evaluation of it.
+        Nothing diverges; the energy is the negative log density.
     """
     keys = jax.random.split(key, settings.chains)
     collected = _compiled_run(model, settings.warmup, settings.draws, data, keys)
@@ -63,6 +63,7 @@ def coordinate_slices(
         energy=np.asarray(energy),
         accept_prob=np.ones(energy.shape),
         n_steps=np.asarray(steps),
+        sampler="slices",
     )
 
 

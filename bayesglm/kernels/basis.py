@@ -120,7 +120,8 @@ class KernelSpec:
     def centres(self) -> FloatArray:
         """Where each weight belongs on the warped axis, and the end, shape (weights + 1,).
 
-        A kernel that is a straight line on that axis has weights on a straight line.
+        A kernel that is a straight line on that axis has weights on a straight line. Exponentials
+        keep the spline at the end: shape (weights,).
         """
         if self.basis == "cosines":
             return np.append(self._cosine_centres, 1.0)
@@ -146,7 +147,7 @@ class KernelSpec:
             even = self.unwarp(np.linspace(ends[0], ends[1], n - narrow + 1)) / finest
             if even[1] - even[0] >= 1 - _SAME_LAG:
                 break
-        # Widths grow from one on, so that rounding leaves no bin empty.
+        # Widths grow from one on, so that rounding makes no two lags the same.
         edges = finest * np.concatenate([np.arange(narrow), np.floor(even + 0.5 + _SAME_LAG)])
         edges[-1] = self.duration_ms
         return edges

@@ -100,9 +100,9 @@ def time_constants(places: jax.Array, log_range: jax.Array) -> jax.Array:
 
 
 def log_gap_density(places: jax.Array) -> jax.Array:
-    """Log density, up to a constant, of places whose gaps are Dirichlet; shape (terms,)."""
+    """Log density, up to a constant, of places, shape (terms,), whose gaps are Dirichlet."""
     gaps = jnp.diff(jnp.sort(places), prepend=0.0, append=1.0)
-    # Two places may be equal in float64; the density is then zero, and not a number nowhere.
+    # Two places may be equal in float64: the density is then zero, its log −inf, never NaN.
     return (GAP_CONCENTRATION - 1.0) * jnp.sum(jnp.log(gaps))
 
 

@@ -7,8 +7,9 @@ out, shrunk towards what the residual's own spectrum predicts:
 
     V = (B·V_jack + K·D V0 D) / (B + K)
 
-with B units and K weights. V_jack is the delete-one-unit jackknife; ``V0 = H⁻¹ Σ_f S_f C_f H⁻¹``
-is the least-squares sandwich under a residual of spectrum S (C_f the Gram matrix of band f);
+with B units and K excited directions. V_jack is the delete-one-unit jackknife;
+``V0 = H⁻¹ Σ_f S_f C_f H⁻¹`` is the least-squares sandwich under a residual of spectrum S (C_f the
+Gram matrix of band f);
 ``D² = max(1, tr(V0⁻¹V_jack)/K_kernel)`` scales it kernel by kernel. Sources: Künsch (1989, Ann
 Statist 17:1217–1241) for blocks, Cameron, Gelbach & Miller (2011, J Bus Econ Stat 29:238–249)
 for clusters, Müller (2013, Econometrica 81:1805–1849) for posteriors built on a sandwich, Bell &
@@ -264,9 +265,9 @@ def _on_splines(spec: KernelSpec) -> FloatArray:
     The ratio is a mean over directions. What units differ by is smooth; over hundreds of weights it
     would be thinned out.
     """
-    few = KernelSpec(spec.duration_ms, min(_RATIO_WEIGHTS, spec.weights), spec.warp_ms)
-    if spec == few:
+    if spec.weights <= _RATIO_WEIGHTS:
         return np.eye(spec.weights)
+    few = KernelSpec(spec.duration_ms, _RATIO_WEIGHTS, spec.warp_ms)
     lags = spec.unwarp(np.linspace(0.0, 1.0, _GRID + 1)[1:-1])
     projection: FloatArray = np.linalg.pinv(few.evaluate(lags)) @ spec.evaluate(lags)
     return projection

@@ -18,9 +18,13 @@ from bayesglm.recording.recording import FloatArray, IntArray
 
 
 def stimulus_clusters(digest: VoltageDigest) -> IntArray:
-    """Index of each unit's stimulus, shape (B,): 0, 1, … in the order of their hashes."""
-    indices: IntArray = np.unique(digest.stimulus, return_inverse=True)[1].astype(np.int64)
-    return indices
+    """Index of each unit's stimulus, shape (B,): 0, 1, …
+
+    Constant current says nothing that a repeat could say again: it is each time one of its own.
+    """
+    constant = digest.current_sd_nA == 0
+    own = np.where(constant, np.arange(digest.n_units), -1)
+    return both(np.where(constant, 0, digest.stimulus), own)
 
 
 def clustered(scores: FloatArray, labels: IntArray) -> FloatArray:

@@ -62,8 +62,9 @@ class VoltageDigest:
     seconds
         Recorded time of the unit, s, shape (B,).
     stimulus
-        Hash of the unit's current, shape (B,): units with the same current have the same, those
-        of constant current each one of their own.
+        Hash of the unit's current, shape (B,).
+    part
+        Which of the file's sweeps, of those joined to one, the unit begins in, shape (B,).
     labels
         The unit in words, such as ``sweep 3`` or ``sweep 0, 2000–3000 ms``.
     sources
@@ -80,6 +81,7 @@ class VoltageDigest:
     spikes: IntArray
     seconds: FloatArray
     stimulus: IntArray
+    part: IntArray
     labels: tuple[str, ...]
     sources: tuple[tuple[str, str], ...] = ()
 
@@ -125,8 +127,7 @@ class VoltageDigest:
         if factor <= 1:
             return self
         groups: list[IntArray] = []
-        for sweep in np.unique(self.sweep):
-            members = np.flatnonzero(self.sweep == sweep)
+        for members in self._mergeable(factor):
             n_groups = max(1, len(members) // factor)
             groups += [np.asarray(g) for g in np.array_split(members, n_groups)]
         weights = [self.seconds[g] / self.seconds[g].sum() for g in groups]
@@ -148,8 +149,22 @@ class VoltageDigest:
             spikes=np.array([self.spikes[g].sum() for g in groups]),
             seconds=np.array([self.seconds[g].sum() for g in groups]),
             stimulus=np.array([hash_of(self.stimulus[g].tobytes()) for g in groups]),
+            part=np.array([self.part[g[0]] for g in groups]),
             labels=tuple(_joined(self.labels[g[0]], self.labels[g[-1]]) for g in groups),
         )
+
+    def _mergeable(self, factor: int) -> list[IntArray]:
+        """Units between which neighbours may be joined: those of a sweep.
+
+        Where a sweep was joined of others that are long enough, those of each, so that repeats
+        from sweep to sweep stay repeats.
+        """
+        found: list[IntArray] = []
+        for sweep in np.unique(self.sweep):
+            members = np.flatnonzero(self.sweep == sweep)
+            parts = [members[self.part[members] == part] for part in np.unique(self.part[members])]
+            found += parts if min(len(part) for part in parts) >= factor else [members]
+        return found
 
     def save(self, path: Path) -> None:
         """Write the digest as NPZ; `load` reads it without executing anything."""
@@ -175,6 +190,7 @@ class VoltageDigest:
             with path.open("rb") as stream, np.load(stream, allow_pickle=False) as file:
                 content = {name: file[name] for name in file.files}
             version = int(content["version"])
+            design = json.loads(str(content["design"]))
         except (*_UNREADABLE, KeyError) as error:
             raise InputError(f"{path}: is not a digest; make it anew with bayesglm fit") from error
         if version != _VERSION:
@@ -183,7 +199,7 @@ class VoltageDigest:
                 "make it anew with bayesglm fit"
             )
         return VoltageDigest(
-            design=_design_from(json.loads(str(content["design"]))),
+            design=_design_from(design),
             labels=tuple(str(label) for label in content["labels"]),
             sources=tuple((str(name), str(digest)) for name, digest in content["sources"]),
             **{name: content[name] for name in _UNIT_ARRAYS},
@@ -192,7 +208,7 @@ class VoltageDigest:
 
 _UNIT_ARRAYS: Final = (
     "sums", "band_sums", "band_share", "sweep", "drive_nA", "current_sd_nA", "spikes", "seconds",
-    "stimulus",
+    "stimulus", "part",
 )  # fmt: skip
 
 

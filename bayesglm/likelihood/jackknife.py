@@ -28,6 +28,9 @@ from bayesglm.recording.recording import FloatArray, IntArray
 #: Of a direction that one cluster carries to more than this share, leaving it out tells nothing.
 MAX_LEVERAGE = 0.5
 
+#: With fewer sweeps their spread says too little for clusters by sweep; of one it is zero.
+_FEWEST_SWEEPS = 6
+
 #: Blocks at least this many correlation times long count as independent of their neighbours.
 INDEPENDENT_TIMES = 20.0
 
@@ -100,20 +103,22 @@ def jackknife(digest: VoltageDigest, fit: LeastSquares, of_sweeps: FloatArray) -
     shares, changes = _leave_out(digest, fit, units)
     covariance = _spread(changes)
     repeated = len(np.unique(stimulus)) < digest.n_units
-    neighbours = not repeated and _short_blocks(digest, fit)
-    labels = units
+    labels = stimulus if repeated else units
     if repeated:
-        labels = stimulus
         shares, by_stimulus = _leave_out(digest, fit, stimulus)
-        sweep = np.unique(digest.sweep, return_inverse=True)[1].astype(np.int64)
+        covariance = _spread(by_stimulus)
+    sweep = np.unique(digest.sweep, return_inverse=True)[1].astype(np.int64)
+    two_way = repeated and int(sweep.max()) + 1 >= _FEWEST_SWEEPS
+    neighbours = not two_way and _short_blocks(digest, fit)
+    if two_way:
         by_sweep = _leave_out(digest, fit, sweep)[1]
         by_both = _leave_out(digest, fit, both(stimulus, sweep))[1]
-        covariance = _spread(by_stimulus) + _spread(by_sweep) - _spread(by_both)
+        covariance = covariance + _spread(by_sweep) - _spread(by_both)
     else:
-        if neighbours:
-            share = (digest.n_units - 1) / digest.n_units
-            covariance = covariance + share * neighbour_products(changes, digest.sweep)
         covariance = covariance + of_sweeps
+    if neighbours:
+        share = (digest.n_units - 1) / digest.n_units
+        covariance = covariance + share * neighbour_products(changes, digest.sweep)
     values, vectors = np.linalg.eigh(covariance)
     floored = int(np.count_nonzero(values < -RANK_TOLERANCE * max(values[-1], 0.0)))
     if floored:

@@ -67,6 +67,11 @@ class LeastSquares:
     lost: FloatArray
 
     @property
+    def drifts(self) -> bool:
+        """Whether sweeps were found to drift."""
+        return bool(np.any(self.sweep_variances[1:] > 0))
+
+    @property
     def rank(self) -> int:
         """Number of directions that are excited, K."""
         return self.basis.shape[1]
@@ -194,8 +199,17 @@ def noise_log_sd(digest: VoltageDigest, fit: LeastSquares) -> tuple[float, float
 
 def spectral_covariance(digest: VoltageDigest, fit: LeastSquares) -> tuple[FloatArray, FloatArray]:
     """V0 within sweeps, (K, K), and the residual spectrum, (F,)."""
+    by_band, spectrum = _by_band(digest, fit, slice(None))
+    return np.einsum("f,fkl->kl", spectrum, by_band), spectrum
+
+
+def _by_band(
+    digest: VoltageDigest, fit: LeastSquares, bands: slice
+) -> tuple[FloatArray, FloatArray]:
+    """Whitened Gram matrices of the columns, (F, K, K), and residual spectrum, (F,), of bands."""
+    band_sums = digest.band_sums[:, bands]
     residual = residual_vectors(digest, fit)
-    power = np.einsum("bi,bfij,bj->f", residual, digest.band_sums, residual)
+    power = np.einsum("bi,bfij,bj->f", residual, band_sums, residual)
     sums = sweep_sums(digest.sums, digest.sweep)
     shrink = shrinkage(sums, fit.sweep_ratios)
     effects, n_weights = effect_columns(len(fit.sweep_ratios)), len(fit.weights)
@@ -204,20 +218,19 @@ def spectral_covariance(digest: VoltageDigest, fit: LeastSquares) -> tuple[Float
     columns[:, :n_weights] = fit.basis
     pulled = shrink @ sums[:, effects, :n_weights] @ fit.basis
     columns[:, effects] -= pulled[digest.sweep]
-    by_band = np.einsum("bpk,bfpq,bql->fkl", columns, digest.band_sums, columns, optimize=True)
-    freedom = _band_rows(digest)
+    by_band = np.einsum("bpk,bfpq,bql->fkl", columns, band_sums, columns, optimize=True)
+    freedom = _band_rows(digest)[bands]
     # The fit takes freedom from the residual, most of it at low frequencies.
     taken = np.trace(by_band, axis1=1, axis2=2)
     left = np.maximum(freedom - taken, _MIN_FREE_SHARE * freedom)
-    spectrum = np.divide(power, left, out=np.zeros_like(power), where=left > 0)
-    return np.einsum("f,fkl->kl", spectrum, by_band), spectrum
+    return by_band, np.divide(power, left, out=np.zeros_like(power), where=left > 0)
 
 
 def _long_run_variance(digest: VoltageDigest, fit: LeastSquares) -> float:
     """Residual spectrum at the lowest frequencies, as variance of white noise of that level."""
-    spectrum, weight = spectral_covariance(digest, fit)[1], _band_rows(digest)
-    slow = weight[:_SLOW_BANDS].sum()
-    return float(spectrum[:_SLOW_BANDS] @ weight[:_SLOW_BANDS] / slow) if slow > 0 else 0.0
+    slow = slice(_SLOW_BANDS)
+    spectrum, weight = _by_band(digest, fit, slow)[1], _band_rows(digest)[slow]
+    return float(spectrum @ weight / weight.sum()) if weight.sum() > 0 else 0.0
 
 
 def _band_rows(digest: VoltageDigest) -> FloatArray:

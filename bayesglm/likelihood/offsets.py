@@ -23,8 +23,8 @@ from scipy.optimize import minimize_scalar
 
 from bayesglm.recording.recording import FloatArray, IntArray
 
-#: Range of log ρ that is searched; the ends are "no offsets" and "offsets 12 sd of the noise".
-_LOG_RATIO_RANGE = (-20.0, 5.0)
+#: Range of log ρ that is searched; the ends are "no offsets" and "offsets 400 sd of the noise".
+_LOG_RATIO_RANGE = (-20.0, 12.0)
 
 #: Rounds over the effects, each with the others held: offset and drift hardly depend on each other.
 _ROUNDS = 2

@@ -103,10 +103,12 @@ def _recording_digest(
                     "band_share": share,
                     "sweep": index,
                     "drive_nA": float(own.mean()),
-                    "current_sd_nA": float(current.std()),
+                    "current_sd_nA": float(current.std()) if np.ptp(current) > 0 else 0.0,
                     "spikes": _spikes_between(sweep, samples.start, samples.stop),
                     "seconds": (stop - start) * design.row_ms / 1e3,
-                    "stimulus": _stimulus(recording, index, samples),
+                    # Minus zero is zero.
+                    "stimulus": hash_of((current + 0.0).tobytes()),
+                    "part": _part(sweep, start * m),
                     "labels": sweep.label + ("" if whole else span),
                 }
             )
@@ -174,6 +176,7 @@ def row_digest(
         spikes=np.zeros(n, dtype=np.int64),
         seconds=np.array([(units == unit).sum() * design.row_ms / 1e3 for unit in labels]),
         stimulus=np.array([stimuli[units == unit][0] for unit in labels]),
+        part=np.zeros(n, dtype=np.int64),
         labels=tuple(f"unit {unit}" for unit in labels),
     )
 
@@ -316,12 +319,17 @@ def _electrode_columns(
 def _unit_edges(
     sweep: Sweep, n_rows: int, m: int, block_ms: float | None, row_ms: float
 ) -> list[tuple[int, int]]:
-    """First row and the one past the end of each unit: blocks, or the file's sweeps."""
+    """First row and the one past the end of each unit: the file's sweeps, or blocks of them."""
+    seams = [0, *(round(first / m) for _, first in sweep.joined[1:]), n_rows]
     if block_ms is None:
-        edges = [0, *(round(first / m) for _, first in sweep.joined[1:]), n_rows]
-    else:
-        n_blocks = max(1, int(n_rows * row_ms / block_ms + 1e-9))
-        edges = np.linspace(0, n_rows, n_blocks + 1).round().astype(int).tolist()
+        return list(pairwise(seams))
+    # A current that is repeated from sweep to sweep is then cut at the same places.
+    if min(np.diff(seams)) * row_ms < block_ms:
+        seams = [0, n_rows]
+    edges = [0]
+    for start, stop in pairwise(seams):
+        n_blocks = max(1, int((stop - start) * row_ms / block_ms + 1e-9))
+        edges += np.linspace(start, stop, n_blocks + 1).round().astype(int).tolist()[1:]
     return list(pairwise(edges))
 
 
@@ -331,12 +339,9 @@ def _spikes_between(sweep: Sweep, start: int, stop: int) -> int:
     return int(np.count_nonzero((sweep.spikes >= start) & (sweep.spikes < stop)))
 
 
-def _stimulus(recording: Recording, sweep: int, samples: slice) -> int:
-    """Hash of a unit's current; of its place where the current is constant and so says nothing."""
-    current = recording.sweeps[sweep].current[samples]
-    if np.ptp(current) > 0:
-        return hash_of(current.tobytes())
-    return hash_of(f"{recording.source} {sweep} {samples}".encode())
+def _part(sweep: Sweep, sample: int) -> int:
+    """Which of the file's sweeps, of those joined to this one, a sample lies in."""
+    return int(np.searchsorted([first for _, first in sweep.joined[1:]], sample, side="right"))
 
 
 def _unit_sums(

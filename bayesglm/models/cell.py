@@ -7,7 +7,7 @@
     w   = μ + S G(τ) y                    weights: offset, electrode, κ, η
     ŵ   ~ normal(w, V/φ)                  the calibrated least-squares estimate
 
-Given σ, τ and φ all is Gaussian, so y is integrated out of what NUTS samples and then drawn
+Given σ, τ and φ all is Gaussian, so y is integrated out of what is sampled and then drawn
 exactly. The covariance is used in precision form: a direction that the recording never excites
 has precision zero and keeps its prior.
 """

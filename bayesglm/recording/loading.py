@@ -40,12 +40,17 @@ def load_cell(entry: CellEntry, settings: Settings) -> tuple[Recording, ...]:
         recording = select(load_recording(one, settings), settings.recording.select)
         # Before sweeps are joined, so that the advice names sweeps and times as selections do.
         refuse_defects(recording)
-        recordings.append(_joined(recording, settings.recording))
+        recordings.append(join(recording, settings.recording))
     return tuple(recordings)
 
 
-def _joined(recording: Recording, section: RecordingSection) -> Recording:
-    """Join contiguous sweeps; a spike that lies across a seam is then found as any other."""
+def join(recording: Recording, section: RecordingSection) -> Recording:
+    """Join contiguous sweeps; a spike that lies across a seam is then found as any other.
+
+    A recording that is joined already is returned as it is.
+    """
+    if any(sweep.joined for sweep in recording.sweeps):
+        return recording
     joined = join_contiguous(recording, section)
     if joined is recording or recording.spikes_from == SPIKES_FROM_FILE:
         return joined

@@ -51,6 +51,8 @@ _LOCAL_HEADER: Final = struct.Struct("<4s22xHH")
 _MEMBERS: Final = struct.Struct("<10xH")
 _LONGEST_END: Final = 22 + 2**16
 _PIECE: Final = 2**24
+#: The largest ratio of sizes that deflate can reach.
+_MOST_SHRUNK: Final = 1032
 
 
 @dataclass(frozen=True)
@@ -210,6 +212,13 @@ def _refuse_type(path: Path, quantity: str, member: _Member) -> None:
         wanted = "0 and 1" if quantity == "spike" else "real numbers"
         raise InputError(
             f"{place}: holds {found} (type {member.dtype}); expected {wanted}; save it as numbers"
+        )
+    # Deflate cannot shrink by more; what states more would fill the memory.
+    packed = member.info.compress_size
+    if member.info.file_size > _MOST_SHRUNK * packed + 1024:
+        raise InputError(
+            f"{place}: the archive is damaged ({packed} bytes cannot hold "
+            f"{member.info.file_size}); save or copy the file again"
         )
     stated = member.header_bytes + math.prod(member.shape) * member.dtype.itemsize
     if stated != member.info.file_size:

@@ -128,7 +128,7 @@ def _model(fit: CellFit) -> tuple[Fact, ...]:
         *_electrode_kernel(design),
         Fact("Rows", f"{design.row_ms:g} ms", "voltage is averaged over rows"),
         Fact("Spike window", minus(f"{before:g} to {after:g} ms"), "left out around each spike"),
-        Fact("Sweep offsets", "yes" if settings.model.sweep_offsets else "no"),
+        Fact("Sweep offsets and drifts", _sweep_effects(fit), "each sweep has its own"),
         Fact("Noise", settings.model.noise),
     ]
     return tuple(facts)
@@ -161,6 +161,14 @@ def _electrode_kernel(design: VoltageDesign) -> list[Fact]:
         return []
     value = f"{bins.duration_ms:g} ms, {bins.weights} bin{'s' if bins.weights > 1 else ''} of lags"
     return [Fact("Electrode kernel", value, "an electrode that charges; part of the term")]
+
+
+def _sweep_effects(fit: CellFit) -> str:
+    """Sds of what each sweep has of its own; a drift's is over the sweep."""
+    if not fit.settings.model.sweep_offsets:
+        return "not fitted"
+    named = zip(("offset", "drift"), fit.calibration.fit.sweep_variances, strict=False)
+    return ", ".join(f"{name} of sd {np.sqrt(variance):.2f} mV" for name, variance in named)
 
 
 def _units(fit: CellFit) -> str:

@@ -63,7 +63,7 @@ class Scalar:
 
 
 def hyperparameters(fit: CellFit) -> list[Scalar]:
-    """What NUTS sampled: sds of the kernels, φ, and the time constants of exponentials."""
+    """What was sampled: sds of the kernels, φ, and the time constants of exponentials."""
     sd = fit.chains.draws["sd"]
     found = [
         Scalar(

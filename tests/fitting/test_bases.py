@@ -79,13 +79,13 @@ def features(found: Posterior) -> dict[str, FeatureDraws]:
 
 
 def curve(found: Posterior, kernel: str, lags: FloatArray) -> FloatArray:
-    """Draws of a kernel; of lags in the middle of the bins that hold `lags`."""
+    """Draws of a kernel at lags, shape (D, n)."""
     draws: FloatArray = found.flat @ kernel_rows(found.design, kernel, lags).T
     return draws
 
 
 def truth(found: Posterior, kernel: str, lags: FloatArray) -> FloatArray:
-    """The true kernel at lags; of a bin of lags its mean over the bin."""
+    """The true kernel at lags; of `lags` lines through its mean around each coefficient's lag."""
 
     def at(s: FloatArray) -> FloatArray:
         decay = np.exp(-STEP_MS / 20)

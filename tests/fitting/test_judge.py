@@ -76,7 +76,7 @@ def test_a_linear_cell_passes(linear_fit: CellFit) -> None:
     }
     verdict = linear_fit.verdict
     assert (verdict.units, verdict.observe, verdict.divergences) == (40, "voltage", 0)
-    assert verdict.route == "least squares, calibrated"
+    assert verdict.route == "least squares, calibrated; NUTS"
     assert verdict.calibration_ratio == linear_fit.calibration.ratio
     assert (verdict.rhat_max < 1.01, verdict.ess_min > 400) == (True, True)
 
@@ -156,7 +156,7 @@ def test_a_membrane_that_is_not_linear(linear_recording: Recording) -> None:
 def test_white_noise_is_never_passed(white_fit: CellFit) -> None:
     assert checks(white_fit)["white_noise"] == "caution"
     assert white_fit.verdict.verdict == "caution"
-    assert white_fit.verdict.route == "white"
+    assert white_fit.verdict.route == "white; NUTS"
 
 
 def test_spikes_of_which_nothing_is_seen() -> None:

@@ -132,6 +132,15 @@ def test_white_noise_is_warned_of_and_several_times_narrower(
     np.testing.assert_allclose(half, 1.645 * solid.sd[known], rtol=0.35)
 
 
+def test_missing_values_are_refused_also_from_python(linear_recording: Recording) -> None:
+    first, *others = linear_recording.sweeps
+    voltage = first.voltage.copy()
+    voltage[5] = np.nan
+    broken = replace(linear_recording, sweeps=(replace(first, voltage=voltage), *others))
+    with pytest.raises(InputError, match="missing"):
+        fit(broken)
+
+
 def test_class_and_animal_are_carried(linear_recording: Recording) -> None:
     entry = CellEntry("c7", (), condition="drug", cell_class="pyramidal", animal="m1")
     found = fit(linear_recording, None, entry)

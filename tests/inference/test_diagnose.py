@@ -153,8 +153,8 @@ def test_repeats_count_as_one_and_the_count_is_told() -> None:
     row = diagnose.unit_reasons(count, 6.1, np.full(80, 0.2), labels, COMMANDS)[0]
     assert row.verdict == "caution"
     assert row.value == (
-        "80 units of 8 different currents, worth 7.6 equal ones: clustered by current and by "
-        "sweep; 2 negative variances are set to zero; 6.1 degrees of freedom"
+        "80 units of 8 different currents, worth 7.6 equal ones: repeats of a current count as "
+        "one; 2 negative variances are set to zero; 6.1 degrees of freedom"
     )
     assert "other currents" in row.advice
     joined = UnitCount(12, 12.0, neighbours=True)
@@ -211,3 +211,11 @@ def test_reasons_name_the_kernel_in_check_and_words() -> None:
     assert told.value == "5.0 sd apart: −0.1 mV at 50 pA"
     assert told.command == COMMANDS.one_drive
     assert diagnose.drive_reason("input", 5.0, "", COMMANDS).command == COMMANDS.narrower
+
+
+def test_slices_have_no_divergences_to_be_told_of() -> None:
+    summary = SamplerSummary(1.0, 900.0, 0.1, 0, "slices")
+    assert grades(diagnose.sampler_reasons(summary, COMMANDS)) == {
+        "rhat": "passed",
+        "effective_draws": "passed",
+    }

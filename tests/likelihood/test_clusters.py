@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from simulated_cells import neuron, recording_of_noise
@@ -77,7 +79,31 @@ def test_a_repeated_current_is_found_by_its_place() -> None:
 
 
 def test_constant_current_is_no_repeat() -> None:
-    assert len(np.unique(digest_of(np.zeros((3, 2000))).stimulus)) == 6
+    digest = digest_of(np.zeros((3, 2000)))
+    assert len(np.unique(stimulus_clusters(digest))) == 6
+    assert len(np.unique(stimulus_clusters(digest.merge(2)))) == 3
+
+
+def test_a_stretch_of_constant_current_does_not_hide_a_repeat() -> None:
+    """Blocks of noise after one of holding current: merged, they are still the same stimulus."""
+    once = np.concatenate([np.zeros(1000), np.random.default_rng(4).normal(0.1, 0.1, 3000)])
+    once[0] = -0.0
+    digest = digest_of(np.stack([once, np.abs(once[:1]).tolist() + once[1:].tolist()]))
+    assert len(np.unique(stimulus_clusters(digest))) == 2 + 3
+    assert len(np.unique(stimulus_clusters(digest.merge(2)))) == 2
+
+
+@pytest.mark.parametrize("factor", [1, 3])
+def test_repeats_in_joined_sweeps_are_cut_at_the_seams(factor: int) -> None:
+    """Eight periods of 4.85 s in one stretch: blocks begin anew with each period."""
+    once = np.random.default_rng(5).normal(0.1, 0.1, 9700)
+    recording = simulate(neuron(), np.tile(once, 8)[None], 0.5, np.random.default_rng(6))
+    (sweep,) = recording.sweeps
+    joined = replace(sweep, joined=tuple((k, 9700 * k) for k in range(8)))
+    design = VoltageDesign(KernelSpec(100.0), None)
+    digest = voltage_digest((replace(recording, sweeps=(joined,)),), design, 500.0).merge(factor)
+    assert digest.n_units == (72 if factor == 1 else 24)
+    assert len(np.unique(stimulus_clusters(digest))) == digest.n_units // 8
 
 
 def test_currents_of_their_own_are_no_repeats() -> None:

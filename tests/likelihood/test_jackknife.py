@@ -70,6 +70,22 @@ def test_what_comes_back_with_the_current_is_seen_only_by_stimulus() -> None:
     assert ratio > 3
 
 
+@pytest.mark.parametrize("n_sweeps", [1, 2, 4])
+def test_repeats_in_few_sweeps_are_left_out_by_stimulus_alone(n_sweeps: int) -> None:
+    """One sweep has no spread between sweeps; clusters by sweep would leave nothing."""
+    x, v, _, block = repeated(2)
+    # White, so that short blocks are not joined to their neighbours besides.
+    v = v + np.tile(np.random.default_rng(3).normal(0.0, 2.0, 600), 6)
+    sweep = np.repeat(np.arange(n_sweeps), -(-3600 // n_sweeps))[:3600]
+    unit = np.repeat(np.arange(60), 60)
+    digest = row_digest(x, v, unit, sweep, plain_design(5), stimuli=block)
+    fit = least_squares(digest, column_scale(digest))
+    found = jackknife(digest, fit, np.zeros((7, 7)))
+    assert found.units.repeated
+    assert found.units.clusters == 10
+    np.testing.assert_allclose(spread_of(digest, fit), refit_spread(x, v, block), rtol=1e-6)
+
+
 def slow_noise(rng: np.random.Generator, n: int, tau: float) -> np.ndarray:
     keep = np.exp(-1 / tau)
     noise: np.ndarray = lfilter([1.0], [1.0, -keep], rng.normal(0, np.sqrt(1 - keep**2), n))

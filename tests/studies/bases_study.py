@@ -4,9 +4,9 @@
 
 The six invented cells of the demo and the real cell under steps, each fitted with splines,
 cosines, one coefficient a lag, and sums of exponentials. All fits see the same data, so that
-their errors are alike and differences should be well inside the bands. Where a basis cannot
-make a kernel it must show here: a sum of few exponentials has no bumps, and coefficients of bins
-of lags are stairs, which leave a steep kernel between their middles.
+their errors are alike and differences should be well inside the bands. Splines and cosines have as
+many weights as the demo states, since fewer blur a steep η. Where a basis cannot make a kernel the
+verdict must say so: a sum of few exponentials has no bumps.
 """
 
 from __future__ import annotations
@@ -35,6 +35,7 @@ FEATURES: Final = {
     "membrane_time_constant": "τ_m, ms",
     "after_spike_at_30ms": "η(30 ms), mV",
 }
+DEMO: Final = ("input.duration_ms=150",)
 #: Lags where the sd of the reference is below this share of the largest are pinned.
 PINNED: Final = 0.02
 
@@ -44,7 +45,7 @@ def cell(number: int, seed: int) -> tuple[str, Recording, tuple[str, ...]]:
     invented = demo_cells()
     if number < len(invented):
         one = invented[number]
-        return one.name, record(one, stream(seed, "bases", number)), ("input.duration_ms=150",)
+        return one.name, record(one, stream(seed, "bases", number)), DEMO
     real = detect_spikes(read_recording(REAL_CELL), Settings().recording)
     return "real", real, ("input.duration_ms=400",)
 
@@ -53,6 +54,8 @@ def settings_of(basis: str, extra: tuple[str, ...]) -> Settings:
     """Both kernels in one basis, and durations given, so that all fits have the same."""
     stated = [*extra, "after_spike.duration_ms=300"]
     stated += [f"{kernel}.basis={basis}" for kernel in KERNELS]
+    if extra == DEMO and basis != "lags":
+        stated.append("after_spike.weights=20")
     plain = ["model.duration_grid=false", "model.window_sensitivity=false"]
     return override(Settings(), [f"kernels.{one}" for one in stated] + plain)
 

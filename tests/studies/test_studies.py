@@ -92,7 +92,7 @@ def test_white_residuals_give_the_exact_width() -> None:
 
 
 def test_bases_agree_on_an_invented_cell() -> None:
-    """Curves of splines and cosines; features of all, for bins of lags are stairs."""
+    """Curves of splines and cosines; features of all bases."""
     (found,) = bases_study.run(Plan(recordings=1))
     for kernel in bases_study.KERNELS:
         assert found["cosines"][f"{kernel} inside"] > 0.9
