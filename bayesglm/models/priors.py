@@ -136,7 +136,7 @@ def weight_prior(design: VoltageDesign, priors: PriorsSection) -> WeightPrior:
         place, scale = columns[name], scales[name]
         shape = smoothness_prior(spec, falls=_falls(name, design))
         root[place, place] = scale * np.column_stack([shape.bends, RIDGE_FACTOR * shape.free])
-        bend[k, place.start : place.stop - 1] = scale**2
+        bend[k, place.start : place.start + shape.bends.shape[1]] = scale**2
     summed = {
         name: exponentials(spec) for name, spec in design.kernels.items() if name not in smooth
     }
@@ -254,7 +254,7 @@ def _kernel_rows(name: str, scale: float, spec: KernelSpec, falls: bool) -> list
             PriorRow(f"amplitudes of {sign}", f"normal(0, {RIDGE_FACTOR * scale:g})", unit, reason),
         ]
     falling = f" of {sign}(s)·√(1 + s/s0)" if falls else ""
-    return [
+    rows = [
         PriorRow(f"sd of {sign}", f"half-normal({scale:g})", unit, reason),
         PriorRow(
             f"bends of {sign}",
@@ -269,3 +269,13 @@ def _kernel_rows(name: str, scale: float, spec: KernelSpec, falls: bool) -> list
             "weak: it only makes the prior proper where bends say nothing",
         ),
     ]
+    if falls:
+        rows.append(
+            PriorRow(
+                f"exponential part of {sign}, of a fifth of its duration",
+                f"normal(0, {RIDGE_FACTOR * scale:g})",
+                unit,
+                "weak: κ is close to one exponential, and only departures from it are smoothed",
+            )
+        )
+    return rows
