@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -42,14 +42,24 @@ class SweepRows:
         """Measured minus predicted, NaN where a row was not fitted, shape (n_rows,)."""
         return np.where(self.kept, self.voltage - self.prediction, np.nan)
 
-    def centred(self, drift: bool) -> FloatArray:
-        """Residual less its mean over the sweep; with `drift` less its straight line."""
-        residual, kept = self.residual, self.kept
+    def own_line(self, drift: bool) -> FloatArray:
+        """Mean of the residual over the sweep, with `drift` its straight line, shape (n_rows,)."""
+        kept = self.kept
         time = self.time_ms - self.time_ms[kept].mean()
         degree = int(drift and np.count_nonzero(kept) > 1)
-        own = np.polynomial.polynomial.polyfit(time[kept], residual[kept], degree)
-        left: FloatArray = residual - np.polynomial.polynomial.polyval(time, own)
-        return left
+        own = np.polynomial.polynomial.polyfit(time[kept], self.residual[kept], degree)
+        line: FloatArray = np.polynomial.polynomial.polyval(time, own)
+        return line
+
+    def centred(self, drift: bool) -> FloatArray:
+        """Residual less the sweep's own mean, or line with `drift`, shape (n_rows,)."""
+        return self.residual - self.own_line(drift)
+
+    def with_own_line(self, drift: bool) -> SweepRows:
+        """The same with the sweep's own mean, or line with `drift`, in its prediction."""
+        if not self.kept.any():
+            return self
+        return replace(self, prediction=self.prediction + self.own_line(drift))
 
 
 def sweep_rows(

@@ -16,6 +16,7 @@ from bayesglm.inference.results import Split, Verdict
 from bayesglm.likelihood.calibration import Calibration
 from bayesglm.likelihood.digest import VoltageDigest
 from bayesglm.likelihood.least_squares import correlation_time_ms
+from bayesglm.recording.gaps import overlap_reason, overlaps
 from bayesglm.recording.linearity import linear_range
 from bayesglm.recording.ranges import format_sweeps
 from bayesglm.recording.recording import Recording
@@ -63,6 +64,7 @@ def judge(
         diagnose.shape_reason(kernel, misfit, _with_splines(kernel, recordings, settings))
         for kernel, misfit in shape_misfit(posterior.design, calibration, mean).items()
     ]
+    reasons += [overlap_reason(one) for one in recordings if overlaps(one)]
     if settings.model.noise == "white":
         reasons.append(_white_reason(commands))
     return Verdict(

@@ -56,9 +56,7 @@ class Posterior:
     @property
     def kernel_sd(self) -> FloatArray:
         """Posterior median of each kernel's sd, shape (n_kernels,)."""
-        sd = self.chains.draws["sd"]
-        median: FloatArray = np.median(sd.reshape(sd.shape[0] * sd.shape[1], -1), axis=0)
-        return median
+        return self.chains.median("sd")
 
 
 def sample_posterior(

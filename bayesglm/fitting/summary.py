@@ -91,6 +91,11 @@ def summarise(
         if halves
     }
     drawn = feature_draws(posterior.flat, posterior.design, posterior.step_ms, report_at_ms)
+    for kernel, tau_ms in posterior.chains.time_constants.items():
+        for k in range(tau_ms.shape[-1]):
+            # Of no part: parts hold them at the median of the whole.
+            one = FeatureDraws("", "ms", tau_ms[..., k].reshape(-1))
+            drawn[f"{kernel}_time_constant_{k + 1}"] = one
     drawn["noise_sd"] = _noise_draws(digest, calibration, len(posterior.flat), rng)
     features = tuple(
         _feature(name, draws, splits, posterior, settings.sampling.level)

@@ -51,6 +51,13 @@ class Chains:
     n_steps: IntArray
     sampler: Literal["NUTS", "slices"] = "NUTS"
 
+    def median(self, site: str) -> FloatArray:
+        """Median over all draws of a site, in the shape of one draw; also of none."""
+        draws = self.draws[site]
+        flat = draws.reshape(draws.shape[0] * draws.shape[1], *draws.shape[2:])
+        median: FloatArray = np.median(flat, axis=0)
+        return median
+
     @property
     def time_constants(self) -> dict[str, FloatArray]:
         """Draws of time constants by kernel of exponentials, ms, shape (chains, draws, terms)."""

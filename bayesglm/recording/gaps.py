@@ -14,6 +14,7 @@ from bayesglm.recording.timegrid import print_resolution
 from bayesglm.recording.wording import check_command, number, sweeps_in_words
 from bayesglm.verdict import Reason
 
+_LIMIT: Final = "no sweep begins before another ends"
 _APART: Final = "what happened between sweeps is unknown, so they count as apart"
 
 
@@ -28,37 +29,58 @@ def gaps_row(recording: Recording, settings: Settings) -> Reason:
         Which sweeps are declared to follow on each other.
     """
     n = len(recording.sweeps)
-    limit = "no sweep begins before another ends"
     if n == 1:
-        return Reason("gaps", "one sweep", limit)
+        return Reason("gaps", "one sweep", _LIMIT)
     chains = _chains(recording, contiguous_groups(recording, settings.recording))
     joined = _joined_in_words(recording, chains)
     if any(sweep.start_s is None for sweep in recording.sweeps):
         return Reason(
             "gaps",
             "; ".join(filter(None, (joined, "starts of the sweeps are not stated"))),
-            limit,
+            _LIMIT,
             advice=f"{_APART}; where they follow without a gap, name them in "
             "recording.contiguous, or give the file a column sweep_start_s",
         )
     if len(chains) == 1:
-        return Reason("gaps", joined, limit)
+        return Reason("gaps", joined, _LIMIT)
     gaps = _gaps_s(recording, chains)
-    starts = np.array([sweep.start_s for sweep in recording.sweeps], dtype=np.float64)
-    if gaps.min() < -print_resolution(starts) - recording.step_ms / 2e3:
-        return Reason(
-            "gaps",
-            f"by the stated starts, sweeps overlap by up to {number(-gaps.min(), 3)} s",
-            limit,
-            "caution",
-            "the starts are wrong: correct sweep_start_s, or leave the column out",
-            check_command(recording),
-        )
+    if overlaps(recording):
+        return overlap_reason(recording)
     # An overlap that is left is the rounding of the starts.
     shortest, longest = (f"{max(value, 0.0):.3g}" for value in (gaps.min(), gaps.max()))
     span = shortest if shortest == longest else f"{shortest} to {longest}"
     between = f"{span} s between {'the others' if joined else 'sweeps'}"
-    return Reason("gaps", "; ".join(filter(None, (joined, between))), limit, advice=_APART)
+    return Reason("gaps", "; ".join(filter(None, (joined, between))), _LIMIT, advice=_APART)
+
+
+def overlaps(recording: Recording) -> bool:
+    """Whether sweeps begin before others end, by their stated starts.
+
+    Starts may be rounded to their last decimal; overlaps that add up to more are none of that.
+    """
+    if any(sweep.start_s is None for sweep in recording.sweeps):
+        return False
+    starts = np.array([sweep.start_s for sweep in recording.sweeps], dtype=np.float64)
+    spare = np.concatenate([[0.0], np.cumsum(_gaps_s(recording, _alone(recording)))])
+    fallen = np.max(np.maximum.accumulate(spare) - spare)
+    return bool(fallen > print_resolution(starts) + recording.step_ms / 2e3)
+
+
+def overlap_reason(recording: Recording) -> Reason:
+    """Row ``gaps`` of a recording whose sweeps overlap."""
+    overlap_s = -float(_gaps_s(recording, _alone(recording)).min())
+    return Reason(
+        "gaps",
+        f"by the stated starts, sweeps overlap by up to {number(overlap_s, 3)} s",
+        _LIMIT,
+        "caution",
+        "the starts are wrong: correct sweep_start_s, or leave the column out",
+        check_command(recording),
+    )
+
+
+def _alone(recording: Recording) -> tuple[tuple[int, ...], ...]:
+    return tuple((index,) for index in range(len(recording.sweeps)))
 
 
 def _chains(recording: Recording, joined: Sequence[tuple[int, ...]]) -> tuple[tuple[int, ...], ...]:

@@ -10,9 +10,11 @@ from typing import Final
 
 import numpy as np
 
+from bayesglm.errors import InputError
 from bayesglm.recording.current import SAME_LEVEL_NA
 from bayesglm.recording.linearity import LARGEST_SHARE, linear_range
 from bayesglm.recording.recording import Recording
+from bayesglm.recording.selection import parse_select, select
 from bayesglm.recording.settings import Settings
 from bayesglm.recording.steps import LevelMeasure, MeanInterval, StepMeasures, mean_interval
 from bayesglm.recording.wording import fit_command, fixed, minus, number
@@ -20,6 +22,8 @@ from bayesglm.verdict import Reason
 
 _LARGEST_SERIES_MOHM: Final = 20.0
 _LARGEST_SERIES_SHARE: Final = 0.15
+#: A selection of fewer sweeps than this is not worth a fit.
+_FEWEST_SWEEPS: Final = 4
 _NO_STEPS: Final = "not measured: no complete steps of current"
 
 
@@ -148,11 +152,21 @@ def _linearity(recording: Recording, measures: StepMeasures, settings: Settings)
         value,
         limit,
         "caution",
-        "beyond this range the cell spikes or bends, and a linear kernel averages over what it "
-        f"does there; inside, departures below {found.chance_mV:.1f} mV would not be seen at a "
-        "level given once",
-        fit_command(recording, found.selection, settings),
+        "beyond this range the cell spikes, bends or drifts, and a linear kernel averages over "
+        f"what it does there; inside, departures below {found.chance_mV:.1f} mV would not be seen "
+        "at a level given once",
+        fit_command(recording, _worth_fitting(recording, found.selection), settings),
     )
+
+
+def _worth_fitting(recording: Recording, selection: str) -> str:
+    """A selection, or none where it would leave too few sweeps for error bars."""
+    chosen = parse_select([selection])
+    try:
+        left = len(select(recording, chosen).sweeps)
+    except InputError:
+        left = 0
+    return selection if left >= _FEWEST_SWEEPS else ""
 
 
 def _with_interval(found: MeanInterval, level: float, digits: int) -> str:

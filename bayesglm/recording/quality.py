@@ -16,6 +16,7 @@ from bayesglm.recording.membrane import baseline_row, membrane_rows
 from bayesglm.recording.ranges import format_sweeps
 from bayesglm.recording.recording import BoolArray, FloatArray, Recording, Sweep
 from bayesglm.recording.repeats import repeats_row
+from bayesglm.recording.selection import LONGEST_STEP_MS, WRONG_TIME_UNIT
 from bayesglm.recording.settings import Settings
 from bayesglm.recording.stability import stability_rows
 from bayesglm.recording.steps import measure_steps
@@ -26,6 +27,8 @@ _STEP_MS: Final = (0.02, 1.0)
 #: A sample that is off the grid by more than this share of the step smears fast kernels.
 _LARGEST_JITTER: Final = 0.1
 _SMALLEST_RANGE_PA: Final = 0.1
+#: Hardly 1 mV in a cell of 500 MΩ.
+_SMALL_RANGE_PA: Final = 2.0
 _CLIPPED_IN_A_ROW: Final = 5
 _SETTLED_MV: Final = 1e-3
 
@@ -74,10 +77,14 @@ def _step(recording: Recording) -> Reason:
     step = recording.step_ms
     shortest, longest = _STEP_MS
     fits = shortest * 0.999 <= step <= longest * 1.001
+    value = f"{number(step, 4)} ms ({number(1 / step, 4)} kHz)"
+    limit = f"{shortest:g} to {longest:g} ms"
+    if step > LONGEST_STEP_MS:
+        return Reason("step", value, limit, "failed", WRONG_TIME_UNIT, check_command(recording))
     return Reason(
         "step",
-        f"{number(step, 4)} ms ({number(1 / step, 4)} kHz)",
-        f"{shortest:g} to {longest:g} ms",
+        value,
+        limit,
         "passed" if fits else "caution",
         "" if fits else "the kernels were checked for steps in this range: resample the recording",
         "" if fits else check_command(recording),
@@ -150,6 +157,16 @@ def _current(recording: Recording) -> Reason:
     value = f"{number(lowest, 4)} to {number(highest, 4)} pA"
     if max(float(np.ptp(current)) for current in finite) < _SMALLEST_RANGE_PA:
         return _constant_current(f"{value}, constant in every sweep", recording)
+    if highest - lowest < _SMALL_RANGE_PA:
+        return Reason(
+            "current",
+            value,
+            f"spans at least {_SMALL_RANGE_PA:g} pA",
+            "caution",
+            "so small a current moves no neuron: the unit in the header is probably wrong "
+            "(current_pA or current_nA)",
+            check_command(recording),
+        )
     return Reason("current", value, "changes within a sweep")
 
 

@@ -29,6 +29,11 @@ def check_select(section: SelectSection) -> None:
             parse_range(key, text)
 
 
+#: A membrane has long settled within such a step, ms.
+LONGEST_STEP_MS = 5.0
+WRONG_TIME_UNIT = "the unit of time in the header is probably wrong (time_ms or time_s)"
+
+
 def parse_select(expressions: Sequence[str], base: SelectSection | None = None) -> SelectSection:
     """Add selections given on the command line to those of the study.
 
@@ -164,7 +169,10 @@ def leave_out_unsettled(recording: Recording, duration_ms: float) -> Recording:
 
 
 def refuse_defects(recording: Recording) -> None:
-    """Refuse what a fit cannot take: jumps in time, missing values, a current that never varies.
+    """Refuse what a fit cannot take.
+
+    That are jumps in time, missing values, steps in which a membrane has long settled, a current
+    that never varies.
 
     Parameters
     ----------
@@ -186,6 +194,11 @@ def refuse_defects(recording: Recording) -> None:
         raise InputError(
             f"{recording.source}, {recording.place(row)}: {words}{more}; a fit needs every value "
             f"in its place; {_mend(recording, sound)}"
+        )
+    if recording.step_ms > LONGEST_STEP_MS:
+        raise InputError(
+            f"{recording.source}: the step is {recording.step_ms:g} ms; expected 0.02 to 1 ms; "
+            f"{WRONG_TIME_UNIT}"
         )
     low = min(float(sweep.current.min()) for sweep in recording.sweeps)
     high = max(float(sweep.current.max()) for sweep in recording.sweeps)

@@ -2,18 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 
 from matplotlib.figure import Figure
 
+from bayesglm.checks.residuals import SweepRows
 from bayesglm.inference.results import CellFit
 from bayesglm.recording.steps import measure_steps
 from bayesglm.report import style
 from bayesglm.report.influence_figures import draw_leave_one_out
 from bayesglm.report.kernel_figures import draw_kernels
 from bayesglm.report.kernel_figures import draw_overview as _overview
-from bayesglm.report.predicted import predict_sweeps
+from bayesglm.report.predicted import Place, predict_sweeps
 from bayesglm.report.residual_figures import draw_residual_distribution, draw_residuals
 from bayesglm.report.sampler_figures import draw_prior_posterior, draw_trace_rank
 from bayesglm.report.sweep_figures import draw_by_sweep, draw_voltage_current
@@ -62,7 +63,7 @@ def draw_figures(
     with style.styled():
         drawn = {
             "kernels": draw_kernels(fit, truth, width_mm),
-            "prediction": draw_prediction(predicted, chosen, width_mm),
+            "prediction": draw_prediction(_with_own_lines(fit, predicted), chosen, width_mm),
             "traces": draw_traces(fit, width_mm),
             "residuals": draw_residuals(fit, rows, width_mm),
             "voltage_current": draw_voltage_current(fit, measures, width_mm),
@@ -73,6 +74,14 @@ def draw_figures(
             "trace_rank": draw_trace_rank(fit, width_mm),
         }
     return {name: figure for name, figure in drawn.items() if figure is not None}
+
+
+def _with_own_lines(fit: CellFit, predicted: Mapping[Place, SweepRows]) -> dict[Place, SweepRows]:
+    """Predictions with each sweep's own offset, and drift where sweeps drift."""
+    if not fit.settings.model.sweep_offsets:
+        return dict(predicted)
+    drifts = fit.calibration.fit.drifts
+    return {place: rows.with_own_line(drifts) for place, rows in predicted.items()}
 
 
 def save_figures(

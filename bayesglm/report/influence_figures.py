@@ -88,7 +88,7 @@ def unit_changes(fit: CellFit, kernel: str) -> UnitChanges:
     band = fit.kernels[kernel]
     white = fit.settings.model.noise == "white"
     precision = fit.calibration.white_precision if white else fit.calibration.precision
-    total = fit.prior.precision(np.median(fit.chains.draws["sd"], axis=(0, 1))) + precision
+    total = fit.prior.precision(fit.chains.median("sd")) + precision
     estimate = fit.calibration.fit.basis @ fit.calibration.changes.T
     changes = np.linalg.solve(total, precision @ estimate)
     moved = (kernel_rows(fit.design, kernel, band.lags_ms) @ changes).T

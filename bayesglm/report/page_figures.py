@@ -71,8 +71,8 @@ def _results(fit: CellFit) -> dict[str, PageFigure]:
             "Recorded voltage in mV against time in ms with the posterior mean of the prediction, "
             "and the residual below, for sweeps from the weakest to the strongest drive.",
             f"Recorded voltage in rows of {fit.design.row_ms:g} ms and the posterior mean of its "
-            "prediction from current and spikes; the residual is their difference. A sweep’s own "
-            f"offset is not part of the prediction. Rows from {window} are left out.",
+            "prediction from current and spikes, with the sweep’s own offset, and its drift where "
+            f"sweeps drift; the residual is their difference. Rows from {window} are left out.",
         ),
         "traces": PageFigure(
             "Recording",
@@ -110,7 +110,7 @@ def _checks(fit: CellFit) -> dict[str, PageFigure]:
     """Whether to believe the fit."""
     level = percent(fit.settings.sampling.level)
     rows = list(predict_sweeps(fit, also=list(representative_sweeps(fit))).values())
-    moments = residual_moments(centred_residuals(rows, fit.settings.model), fit.design.row_ms)
+    moments = residual_moments(centred_residuals(rows, fit), fit.design.row_ms)
     named = ", ".join(fit.digest.labels[unit] for unit in most_influential(fit)[:3])
     return {
         "by_sweep": PageFigure(

@@ -16,7 +16,6 @@ from scipy import fft
 from bayesglm.checks.residuals import SweepRows, sweep_rows
 from bayesglm.inference.results import CellFit
 from bayesglm.recording.recording import FloatArray, Recording, Sweep
-from bayesglm.recording.settings import ModelSection
 
 #: Index of a recording in the fit, and of a sweep in the recording.
 Place = tuple[int, int]
@@ -88,15 +87,15 @@ def mean_current_nA(recording: Recording, number: int) -> float:
     return float(recording.sweeps[number].current.mean())
 
 
-def centred_residuals(sweeps: Sequence[SweepRows], model: ModelSection) -> list[FloatArray]:
-    """Residual of each sweep less what the model gives the sweep as its own.
+def centred_residuals(sweeps: Sequence[SweepRows], fit: CellFit) -> list[FloatArray]:
+    """Residual of each sweep less what the fit gives the sweep as its own.
 
     Parameters
     ----------
     sweeps
         The predicted sweeps.
-    model
-        Says whether sweeps have offsets, and drifts.
+    fit
+        Says whether sweeps have offsets, and drift.
 
     Returns
     -------
@@ -104,9 +103,9 @@ def centred_residuals(sweeps: Sequence[SweepRows], model: ModelSection) -> list[
         mV, NaN where a row was not fitted; sweeps without fitted rows are passed over.
     """
     fitted = [rows for rows in sweeps if rows.kept.any()]
-    if not model.sweep_offsets:
+    if not fit.settings.model.sweep_offsets:
         return [rows.residual for rows in fitted]
-    return [rows.centred(model.sweep_drift) for rows in fitted]
+    return [rows.centred(fit.calibration.fit.drifts) for rows in fitted]
 
 
 def residual_autocorrelation(

@@ -32,7 +32,7 @@ def draw_residuals(fit: CellFit, predicted: Sequence[SweepRows], width_mm: float
     figure = new_figure(width_mm, height)
     grid = panels(figure, 3 - columns, columns, margins)
     left, right = (stack[0] for line in grid for stack in line)
-    residuals = centred_residuals(predicted, fit.settings.model)
+    residuals = centred_residuals(predicted, fit)
     lags, correlation = residual_autocorrelation(residuals, fit.design.row_ms, _LONGEST_MS)
     left.plot(lags, correlation, color=BLUE, linewidth=1.2, label="residual")
     left.axhline(0.0, color=GREY, linewidth=0.9, linestyle=_WHITE, label="white noise")
@@ -79,7 +79,7 @@ def draw_residual_distribution(
     fit: CellFit, predicted: Sequence[SweepRows], width_mm: float
 ) -> Figure:
     """Draw the histogram of the residual against a normal of its sd, with its moments in words."""
-    residuals = centred_residuals(predicted, fit.settings.model)
+    residuals = centred_residuals(predicted, fit)
     found = residual_moments(residuals, fit.design.row_ms)
     wide = width_mm > 120
     margins = Margins(left=15.0, right=70.0) if wide else Margins(left=15.0, top=27.0, bottom=24.0)

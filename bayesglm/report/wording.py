@@ -57,6 +57,8 @@ _CHECKS: Final = {
 }
 _NEGATIVE: Final = re.compile(r"(?<![\w-])-(?=\d)")
 _AT: Final = "after_spike_at_"
+_TAU: Final = re.compile(r"(input|after_spike)_time_constant_(\d+)")
+_SIGNS: Final = {"input": "κ", "after_spike": "η"}
 _BUMP: Final = "after_spike_peak_probability"
 _MOST_DECIMALS: Final = 3
 
@@ -122,6 +124,8 @@ def feature_label(name: str) -> str:
     """Name a feature in words."""
     if name.startswith(_AT):
         return f"η at {_lag_ms(name):g} ms after a spike"
+    if found := _TAU.fullmatch(name):
+        return f"Time constant {found[2]} of {_SIGNS[found[1]]}"
     return _FEATURES.get(name, name.replace("_", " ").capitalize())
 
 

@@ -8,7 +8,7 @@ from pathlib import Path
 import pytest
 from rc_cell import rc_recording
 
-from bayesglm.recording.gaps import gaps_row
+from bayesglm.recording.gaps import gaps_row, overlaps
 from bayesglm.recording.reading import read_recording
 from bayesglm.recording.recording import Recording
 from bayesglm.recording.settings import Settings
@@ -81,3 +81,12 @@ def test_the_gaps_of_the_real_cell() -> None:
     row = gaps_row(read_recording(DATA / "cell_a_steps.csv.gz"), Settings())
     assert row.value == "0.5 s between sweeps"
     assert row.advice == "what happened between sweeps is unknown, so they count as apart"
+
+
+@pytest.mark.parametrize("starts_s", [(0.0, 0.0, 1.0, 1.0, 2.0), (0.0, 0.9, 1.8, 2.7)])
+def test_overlaps_that_add_up_are_no_rounding(starts_s: tuple[float, ...]) -> None:
+    """Each is within the last decimal of the starts, together they are not."""
+    recording = _starting(*starts_s)
+    assert overlaps(recording)
+    assert gaps_row(recording, Settings()).verdict == "caution"
+    assert not overlaps(_starting(0.0, 1.0, 2.0, 3.0))

@@ -11,10 +11,11 @@ import numpy as np
 import pytest
 from rc_cell import rc_recording, recording_of
 
+from bayesglm.errors import InputError
 from bayesglm.recording.quality import check_recording
 from bayesglm.recording.reading import read_recording
 from bayesglm.recording.recording import Recording, Sweep, TimeJump
-from bayesglm.recording.selection import parse_select, select
+from bayesglm.recording.selection import parse_select, refuse_defects, select
 from bayesglm.recording.settings import RecordingSection, Settings
 from bayesglm.recording.spikes import detect_spikes
 from bayesglm.verdict import Reason
@@ -181,3 +182,22 @@ def test_the_real_cell() -> None:
     assert others == {"passed"}
     levels = [row.value.split(":")[0] for row in rows if row.check == "input_resistance"]
     assert levels == ["−100 pA", "−75 pA", "−50 pA", "−25 pA", "25 pA"]
+
+
+def test_a_step_of_seconds_is_a_wrong_unit_of_time(recording: Recording) -> None:
+    """Milliseconds in a column of seconds: refused by the fit, failed by the check."""
+    slow = replace(recording, step_ms=50.0)
+    row = _rows(slow)["step"]
+    assert row.verdict == "failed"
+    assert "time_ms or time_s" in row.advice
+    with pytest.raises(InputError, match=r"the step is 50 ms; expected 0\.02 to 1 ms"):
+        refuse_defects(slow)
+
+
+def test_a_current_of_a_picoampere_is_a_wrong_unit(recording: Recording) -> None:
+    """Nanoamperes in a column of picoamperes."""
+    sweeps = tuple(replace(sweep, current=sweep.current / 1e3) for sweep in recording.sweeps)
+    assert _rows(recording)["current"].verdict == "passed"
+    row = _rows(replace(recording, sweeps=sweeps))["current"]
+    assert row.verdict == "caution"
+    assert "current_nA" in row.advice

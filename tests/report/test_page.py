@@ -153,7 +153,7 @@ def test_figures_that_check_the_fit_are_folded_away(fit: CellFit, page_of: Write
 def test_captions_tell_numbers_and_how_to_judge(fit: CellFit, page_of: Write) -> None:
     text = page_of(fit).text
     rows = list(predict_sweeps(fit, also=list(representative_sweeps(fit))).values())
-    residuals = centred_residuals(rows, fit.settings.model)
+    residuals = centred_residuals(rows, fit)
     for words in (
         *moments_in_words(residual_moments(residuals, fit.design.row_ms)),
         "goes beyond 4 robust sd",

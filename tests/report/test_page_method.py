@@ -24,7 +24,7 @@ from bayesglm.report.page_method import fitted
         (
             KernelSpec(90.0, 20, 2.0, "lags", 0.5),
             "90 ms, 20 weights",
-            "bins of lags, at least 0.5 ms wide, even in log(1 + lag/2 ms)",
+            "lags at least 0.5 ms apart, even in log(1 + lag/2 ms)",
         ),
         (
             KernelSpec(90.0, 180, 2.0, "lags", 0.5),

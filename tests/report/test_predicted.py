@@ -8,7 +8,8 @@ from made_fit import step_recording
 
 from bayesglm.checks.residuals import SweepRows
 from bayesglm.inference.results import CellFit
-from bayesglm.recording.settings import ModelSection
+from bayesglm.recording.settings import Settings
+from bayesglm.recording.settings_input import override
 from bayesglm.report import predicted
 
 
@@ -50,17 +51,18 @@ def test_a_perfect_prediction_has_no_correlation() -> None:
 
 
 @pytest.mark.parametrize("drift", [True, False])
-def test_offsets_and_drifts_of_sweeps_are_taken_out(drift: bool) -> None:
+def test_offsets_and_drifts_of_sweeps_are_taken_out(drift: bool, fit: CellFit) -> None:
     """Measured: 3 mV and a line; what is left is closed form."""
     kept = np.arange(200) % 7 > 0
     slope = 0.01 * (np.arange(200) + 0.5)
     rows, empty = rows_of(3.0 + slope, kept), rows_of(slope, np.zeros(200, dtype=bool))
-    model = ModelSection(sweep_drift=drift)
-    (found,) = predicted.centred_residuals([rows, empty], model)
+    least = replace(fit.calibration.fit, sweep_variances=np.array([0.1, 0.2 * drift]))
+    drifting = replace(fit, calibration=replace(fit.calibration, fit=least))
+    (found,) = predicted.centred_residuals([rows, empty], drifting)
     expected = np.zeros(200) if drift else slope - slope[kept].mean()
     np.testing.assert_allclose(found[kept], expected[kept], atol=1e-9)
     assert np.isnan(found[~kept]).all()
-    plain = model.model_copy(update={"sweep_offsets": False})
+    plain = replace(fit, settings=override(Settings(), ["model.sweep_offsets=false"]))
     np.testing.assert_allclose(predicted.centred_residuals([rows], plain)[0], rows.residual)
 
 

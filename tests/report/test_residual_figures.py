@@ -43,7 +43,7 @@ def test_an_empty_band_joins_the_next(fit: CellFit) -> None:
 
 def test_the_histogram_is_that_of_the_residual(fit: CellFit) -> None:
     rows = list(predict_sweeps(fit).values())
-    residuals = centred_residuals(rows, fit.settings.model)
+    residuals = centred_residuals(rows, fit)
     pooled = np.concatenate(residuals)
     pooled = pooled[np.isfinite(pooled)]
     axes = draw_residual_distribution(fit, rows, 180.0).axes[0]
@@ -62,7 +62,7 @@ def test_the_histogram_is_that_of_the_residual(fit: CellFit) -> None:
 @pytest.mark.parametrize("width_mm", [85.0, 180.0])
 def test_moments_and_events_are_told_in_the_panel(fit: CellFit, width_mm: float) -> None:
     rows = list(predict_sweeps(fit).values())
-    found = residual_moments(centred_residuals(rows, fit.settings.model), fit.design.row_ms)
+    found = residual_moments(centred_residuals(rows, fit), fit.design.row_ms)
     axes = draw_residual_distribution(fit, rows, width_mm).axes[0]
     (text,) = [text.get_text() for text in axes.texts]
     assert text == "\n".join(moments_in_words(found))
