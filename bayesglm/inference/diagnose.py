@@ -22,9 +22,9 @@ _ESS_LIMIT, _ESS_FAILED = 400.0, 100.0
 _BFMI_LIMIT = 0.3
 _UNITS_LIMIT, _UNITS_FAILED = 10, 4
 _RATIO_LIMIT = 1.5
-#: Disagreement is that of the worst lag. A kernel has some six independent ones, so that chance
-#: exceeds this in one or two of a hundred linear cells.
-_DISAGREEMENT_LIMIT = 3.0
+#: Disagreement is that of the worst lag. A kernel has some ten independent ones, and four such
+#: checks are made: chance exceeds this in two of a hundred linear cells, and 3 in ten.
+_DISAGREEMENT_LIMIT = 3.5
 _LINEARITY_LIMIT = 0.1
 _LEVERAGE_LIMIT = 0.5
 _PRIOR_SHARE_LIMIT = 0.8

@@ -7,9 +7,7 @@ cell that rectifies. A linear kernel belongs to cell and protocol, so each third
 cut by drive as the split cuts them, has a kernel of its own. The truth of a third is the
 least-squares kernel of a hundred noise-free repeats of its sweeps, without a prior, and with the
 variance of sweeps' offsets that the recording's own fit has. Judged is whether
-`protocol_lower/upper` hold it. They end at the estimates of the thirds, so where a third is the
-extreme one its own truth lies outside about every other time; beside them stands the hull of
-the main band and the bands of all thirds.
+`protocol_lower/upper` hold it; beside them stand the main band and the third's own.
 """
 
 from __future__ import annotations
@@ -103,9 +101,6 @@ def step_one(seed: int, repeats: int, number: int) -> Found:
         found[f"{kernel} ranges"] = len(ranges)
         if not ranges:
             continue
-        means, sds = np.array([r.curve for r in ranges]).swapaxes(0, 1)
-        lowest = np.minimum(band.lower, (means - REACH * sds).min(axis=0))
-        highest = np.maximum(band.upper, (means + REACH * sds).max(axis=0))
         for third, part in zip(THIRDS, ranges, strict=False):
             truth = true_kernel(one, kernel, part.units, repeats, seed)
             key = f"{kernel} {third}"
@@ -115,8 +110,6 @@ def step_one(seed: int, repeats: int, number: int) -> Found:
             found[f"{key} hull"] = float(hull[known].mean())
             found[f"{key} band"] = float(main[known].mean())
             found[f"{key} own"] = float(np.mean((np.abs(mean - truth) <= REACH * sd)[known]))
-            wide = (lowest <= truth) & (truth <= highest)
-            found[f"{key} wide"] = float(wide[known].mean())
             at = SHOWN_MS[kernel]
             found[f"{key} truth"] = np.interp(at, band.lags_ms, truth).tolist()
             found[f"{key} mean"] = np.interp(at, band.lags_ms, mean).tolist()
@@ -159,13 +152,12 @@ def main() -> None:
     for kernel, sign in KERNELS.items():
         split = [one for one in found if one[f"{kernel} ranges"] == len(THIRDS)]
         for third in THIRDS:
-            keys = [f"{kernel} {third} {way}" for way in ("hull", "wide", "band", "own")]
+            keys = [f"{kernel} {third} {way}" for way in ("hull", "band", "own")]
             shares = [rows_of({"": key}, {"": split})[0][1] for key in keys]
             rows.append([f"{sign} of the {third} third", *shares])
     head = [
         "lags covered",
         "protocol's hull",
-        "hull of all four bands",
         "main band alone",
         "the third's own band",
     ]
