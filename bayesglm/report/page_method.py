@@ -68,7 +68,7 @@ def diagnostics(fit: CellFit) -> tuple[Fact, ...]:
     return (
         Fact("Largest R̂", f"{verdict.rhat_max:.3f}", "below 1.01: the chains agree"),
         Fact("Smallest effective draws", f"{verdict.ess_min:.0f}", "above 400"),
-        Fact("Divergences", str(verdict.divergences), "should be none"),
+        _sampler(fit),
         Fact(
             "Chains and draws",
             f"{sampling.chains} × {sampling.draws} after {sampling.warmup} of warm-up",
@@ -89,6 +89,12 @@ def diagnostics(fit: CellFit) -> tuple[Fact, ...]:
             ", ".join(f"{stage} {s:.1f} s" for stage, s in verdict.seconds.items()),
         ),
     )
+
+
+def _sampler(fit: CellFit) -> Fact:
+    if fit.chains.sampler != "NUTS":
+        return Fact("Sampler", "slice by slice", "as time constants are fitted; cannot diverge")
+    return Fact("Divergences of NUTS", str(fit.verdict.divergences), "should be none")
 
 
 def _recording(recording: Recording) -> FittedRecording:
