@@ -129,7 +129,8 @@ def test_white_noise_is_warned_of_and_several_times_narrower(
     solid = white.kernel("input")
     known = solid.sd > 0.1 * solid.sd.max()
     half = (dotted.white_upper - dotted.white_lower)[known] / 2
-    np.testing.assert_allclose(half, 1.645 * solid.sd[known], rtol=0.35)
+    # Its kernel sds are those of the calibrated fit, which are smaller.
+    np.testing.assert_allclose(half, 1.645 * solid.sd[known], rtol=0.5)
 
 
 def test_missing_values_are_refused_also_from_python(linear_recording: Recording) -> None:
