@@ -164,7 +164,8 @@ def test_test_pulses_stay_out_and_one_level_is_no_line(fit: CellFit) -> None:
     assert {one.step.stop - one.step.start for one in found} == {round(800 / STEP_MS)}
     pulses, measures = figures_of(fit, drifting())
     both = comparable_steps((*long, *pulses.recordings), [measure_steps(long[0]), *measures])
-    assert both == found
+    # Measures hold NaN, which is not equal to itself.
+    assert [one.step for one in both] == [one.step for one in found]
     assert draw_voltage_current(pulses, measures, 180.0) is None
 
 
