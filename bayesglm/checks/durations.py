@@ -20,18 +20,17 @@ import numpy as np
 from scipy.optimize import brentq
 
 from bayesglm.inference.sensitivity import DurationGrid
+from bayesglm.inference.setup import INPUT_BOUNDS_MS
 from bayesglm.kernels.basis import KernelSpec
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.calibration import Calibration
 from bayesglm.likelihood.clusters import stimulus_clusters
 from bayesglm.likelihood.digest import VoltageDigest
-from bayesglm.likelihood.least_squares import RANK_TOLERANCE, correlation_time_ms
+from bayesglm.likelihood.least_squares import RANK_TOLERANCE, correlation_time_ms, rows_apart
 from bayesglm.likelihood.offsets import marginalise, sweep_sums
 from bayesglm.models.priors import WeightPrior
 from bayesglm.recording.recording import BoolArray, FloatArray, IntArray
 
-#: The grid goes from about the first to at most the second, ms, a kernel's own duration within.
-_RANGE_MS = (50.0, 400.0)
 #: Intervals between knots from lag 0 to the longest duration: durations 15–35 % apart.
 _INTERVALS = 20
 #: Durations of a kernel at most.
@@ -56,7 +55,7 @@ def longest_design(design: VoltageDesign, room_ms: float) -> VoltageDesign:
 
     def longest(spec: KernelSpec) -> KernelSpec:
         chosen = spec.duration_ms
-        duration = max(chosen, min(_RANGE_MS[1], room_ms))
+        duration = max(chosen, min(INPUT_BOUNDS_MS[1], room_ms))
         warp = _warp_with_knot(chosen, duration, spec.warp_ms)
         return KernelSpec(duration, _INTERVALS + 2, warp)
 
@@ -173,7 +172,7 @@ def hold_out_groups(digest: VoltageDigest) -> tuple[IntArray, IntArray]:
 
 def _places(spec: KernelSpec, chosen_ms: float) -> IntArray:
     """Indices of the knots that are the grid's durations, the chosen one and the last within."""
-    distance = np.abs(np.log(knots_ms(spec)[1:] / np.array([[_RANGE_MS[0]], [chosen_ms]])))
+    distance = np.abs(np.log(knots_ms(spec)[1:] / np.array([[INPUT_BOUNDS_MS[0]], [chosen_ms]])))
     first, own = (distance.argmin(axis=1) + 1).tolist()
     last = spec.weights - 2
     places = np.unique(np.linspace(min(first, own), last, _MOST).round().astype(np.int64))
@@ -205,7 +204,7 @@ def _held_out_errors(
     correlation time apart were independent.
     """
     fit, (groups, folds) = calibration.fit, split
-    apart = max(1.0, 2 * correlation_time_ms(digest, fit) / digest.design.row_ms)
+    apart = rows_apart(correlation_time_ms(digest, fit), digest.design.row_ms)
     tempered = max(fit.residual_variance * apart, 1e-12)
 
     def total(units: IntArray) -> FloatArray:

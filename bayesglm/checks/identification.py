@@ -16,8 +16,10 @@ import numpy as np
 
 from bayesglm.errors import InputError
 from bayesglm.inference.bands import identified, kernel_rows
+from bayesglm.inference.diagnose import PRIOR_SHARE_LIMIT, UNITS_LIMIT
 from bayesglm.inference.setup import nominal_unit_ms, resolve_design, settle
 from bayesglm.likelihood.digest import VoltageDigest
+from bayesglm.likelihood.least_squares import rows_apart
 from bayesglm.likelihood.voltage import voltage_digest
 from bayesglm.models.priors import WeightPrior, weight_prior
 from bayesglm.recording.loading import join
@@ -32,13 +34,13 @@ from bayesglm.verdict import Reason
 NOISE_MV: Final = 1.0
 NOISE_MS: Final = 20.0
 #: Above this ratio of posterior to prior sd a lag is set by the prior.
-_LARGEST_RATIO: Final = 0.8
+_LARGEST_RATIO: Final = PRIOR_SHARE_LIMIT
 _SMALLEST_SHARE: Final = 0.5
 #: A kernel's sum and one time are two numbers; its shape begins with the third. Less than one is
 #: not even the sum.
 _FEWEST_WEIGHTS: Final = 3.0
 _NOTHING: Final = 1.0
-_FEWEST_UNITS: Final = 10
+_FEWEST_UNITS: Final = UNITS_LIMIT
 _STEP_MS: Final = 1.0
 _SMALLEST_RANGE_NA: Final = 0.1e-3
 #: As short as an input kernel gets by default, ms.
@@ -127,8 +129,8 @@ def identification(
     dict from kernel to Identification
     """
     design = digest.design
-    rows_apart = max(1.0, 2 * NOISE_MS / design.row_ms)
-    precision = _information(digest, sweep_offsets) / (NOISE_MV**2 * rows_apart)
+    variance = NOISE_MV**2 * rows_apart(NOISE_MS, design.row_ms)
+    precision = _information(digest, sweep_offsets) / variance
     # In coordinates in which the prior has unit size.
     root = prior.root
     data = root.T @ precision @ root

@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from bayesglm.kernels.design import VoltageDesign, row_means
+from bayesglm.likelihood.least_squares import rows_apart
 from bayesglm.likelihood.voltage import kept_rows, predict_rows
 from bayesglm.recording.recording import BoolArray, FloatArray, Recording, Sweep
 
@@ -141,7 +142,7 @@ def linearity(
     sizes = np.array([len(part) for part in bins])
     variance = float(residual.var())
     share = float((sizes @ means**2) / sizes.sum() / variance) if variance > 0 else 0.0
-    independent = len(residual) / max(1.0, 2 * correlation_ms / design.row_ms)
+    independent = len(residual) / rows_apart(correlation_ms, design.row_ms)
     chance = (len(bins) - 1) / max(independent, 1.0)
     centres = np.array([prediction[part].mean() for part in bins])
     return Linearity(centres, means, max(0.0, share - chance))

@@ -7,8 +7,9 @@ so least squares on them tells how far the data are from the sum.
 from __future__ import annotations
 
 import numpy as np
-from scipy.stats import f, norm
+from scipy.stats import f
 
+from bayesglm.checks.splits import as_sds
 from bayesglm.inference.bands import identified, kernel_lags, kernel_rows
 from bayesglm.kernels.design import VoltageDesign
 from bayesglm.likelihood.calibration import Calibration
@@ -52,7 +53,5 @@ def shape_misfit(
         apart = vectors[:, kept].T @ (rows @ (calibration.fit.weights - weights))
         freedom = max(int(np.count_nonzero(kept)) - 2 * spec.terms, 1)
         statistic = float(np.sum(apart**2 / values[kept])) / freedom
-        log_p = f.logsf(statistic, freedom, calibration.freedom)
-        # Beyond 37 sds the tail of the normal is zero in float64.
-        found[name] = float(min(norm.isf(np.exp(log_p) / 2), 37.0))
+        found[name] = as_sds(float(f.logsf(statistic, freedom, calibration.freedom)))
     return found

@@ -159,7 +159,11 @@ def disagreement(means: FloatArray, sds: FloatArray) -> float:
     x, precision = means[:, usable], 1.0 / sds[:, usable] ** 2
     centre = (precision * x).sum(axis=0) / precision.sum(axis=0)
     chi_square = (precision * (x - centre) ** 2).sum(axis=0)
-    log_p = chi2.logsf(chi_square.max(), df=len(x) - 1)
+    return as_sds(float(chi2.logsf(chi_square.max(), df=len(x) - 1)))
+
+
+def as_sds(log_p: float) -> float:
+    """The sds of a normal variate that would surprise as much as a log of a probability."""
     # Beyond 37 sds the tail of the normal is zero in float64.
     return float(min(norm.isf(np.exp(log_p) / 2), 37.0))
 

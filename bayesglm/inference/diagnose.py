@@ -13,21 +13,20 @@ import numpy as np
 from arviz_stats.base import array_stats
 
 from bayesglm.inference.sample import Chains
-from bayesglm.likelihood.jackknife import UnitCount
+from bayesglm.likelihood.jackknife import MAX_LEVERAGE, UnitCount
 from bayesglm.recording.recording import FloatArray
 from bayesglm.verdict import Reason, Severity
 
 _RHAT_LIMIT, _RHAT_FAILED = 1.01, 1.05
 _ESS_LIMIT, _ESS_FAILED = 400.0, 100.0
 _BFMI_LIMIT = 0.3
-_UNITS_LIMIT, _UNITS_FAILED = 10, 4
+UNITS_LIMIT, _UNITS_FAILED = 10, 4
 _RATIO_LIMIT = 1.5
 #: Disagreement is that of the worst lag. A kernel has some ten independent ones, and four such
 #: checks are made: chance exceeds this in two of a hundred linear cells, and 3 in ten.
 _DISAGREEMENT_LIMIT = 3.5
 _LINEARITY_LIMIT = 0.1
-_LEVERAGE_LIMIT = 0.5
-_PRIOR_SHARE_LIMIT = 0.8
+PRIOR_SHARE_LIMIT = 0.8
 
 KERNEL_SIGNS = {"input": "input kernel κ", "after_spike": "after-spike kernel η"}
 
@@ -173,13 +172,13 @@ def unit_reasons(
     commands: Commands,
 ) -> list[Reason]:
     """Rows on the independent units; `leverage` and `labels` are those of each unit."""
-    few = units.clusters < _UNITS_LIMIT
+    few = units.clusters < UNITS_LIMIT
     heaviest = int(np.argmax(leverage))
     return [
         Reason(
             "units",
             _units_in_words(units, freedom, len(labels)),
-            f"≥ {_UNITS_LIMIT}",
+            f"≥ {UNITS_LIMIT}",
             _grade(not few, units.clusters < _UNITS_FAILED),
             *_when(
                 few,
@@ -191,10 +190,10 @@ def unit_reasons(
         Reason(
             "one_unit_decides",
             f"{labels[heaviest]} carries {100 * min(leverage[heaviest], 1.0):.0f} % of a direction",
-            f"≤ {100 * _LEVERAGE_LIMIT:.0f} %",
-            _grade(leverage[heaviest] <= _LEVERAGE_LIMIT),
+            f"≤ {100 * MAX_LEVERAGE:.0f} %",
+            _grade(leverage[heaviest] <= MAX_LEVERAGE),
             *_when(
-                leverage[heaviest] > _LEVERAGE_LIMIT,
+                leverage[heaviest] > MAX_LEVERAGE,
                 "part of a kernel rests on one unit; record more like it",
                 commands.check,
             ),
@@ -352,7 +351,7 @@ def prior_reasons(shares: dict[str, FloatArray], commands: Commands) -> list[Rea
     for kernel, by_lag in shares.items():
         # Where the prior pins a kernel to zero, as at its end, there is no share.
         share = by_lag[np.isfinite(by_lag)]
-        set_by_prior = float(np.mean(share > _PRIOR_SHARE_LIMIT)) if len(share) else 1.0
+        set_by_prior = float(np.mean(share > PRIOR_SHARE_LIMIT)) if len(share) else 1.0
         severity: Severity = "passed"
         if set_by_prior > 0.5:
             severity = "failed" if set_by_prior == 1.0 else "caution"

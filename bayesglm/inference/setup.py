@@ -22,6 +22,7 @@ from bayesglm.likelihood.least_squares import (
     LeastSquares,
     correlation_time_ms,
     least_squares,
+    rows_apart,
     with_sweep_effects,
 )
 from bayesglm.likelihood.voltage import refuse_long_kernels, voltage_digest
@@ -36,7 +37,7 @@ from bayesglm.recording.study import CellEntry
 
 #: Input kernel: this many membrane time constants, within these bounds, ms.
 _TIME_CONSTANTS = 5.0
-_INPUT_BOUNDS_MS = (50.0, 400.0)
+INPUT_BOUNDS_MS = (50.0, 400.0)
 _AFTER_SPIKE_MS = 300.0
 #: Of what a sweep has, a kernel may take this share by default.
 _SWEEP_SHARE = 0.5
@@ -116,7 +117,7 @@ def resolve_design(recordings: Sequence[Recording], settings: Settings) -> Volta
     sections = settings.kernels
     after_ms = sections.after_spike.duration_ms or min(_AFTER_SPIKE_MS, room)
     spikes = sum(recording.n_spikes for recording in recordings)
-    longest_input = min(_INPUT_BOUNDS_MS[1], room)
+    longest_input = min(INPUT_BOUNDS_MS[1], room)
 
     row_ms = common_row_ms(recordings, settings)
     electrode_ms = sections.electrode.duration_ms
@@ -139,7 +140,7 @@ def resolve_design(recordings: Sequence[Recording], settings: Settings) -> Volta
     if tau is None:
         settled = settle(recordings, longest_input, settings)
         tau = _time_constant_from_fit(settled, _of_splines(design(longest_input)), settings)
-    lower = min(_INPUT_BOUNDS_MS[0], room)
+    lower = min(INPUT_BOUNDS_MS[0], room)
     return design(float(np.round(np.clip(_TIME_CONSTANTS * tau, lower, longest_input))))
 
 
@@ -265,6 +266,6 @@ def _time_constant_from_fit(
 
 def _tempered(digest: VoltageDigest, fit: LeastSquares) -> FloatArray:
     """Precision of the weights as if rows a correlation time apart were independent."""
-    rows_apart = max(1.0, 2 * correlation_time_ms(digest, fit) / digest.design.row_ms)
-    precision: FloatArray = fit.back.T @ fit.back / max(fit.residual_variance * rows_apart, 1e-12)
+    apart = rows_apart(correlation_time_ms(digest, fit), digest.design.row_ms)
+    precision: FloatArray = fit.back.T @ fit.back / max(fit.residual_variance * apart, 1e-12)
     return precision

@@ -185,6 +185,11 @@ def correlation_time_ms(digest: VoltageDigest, fit: LeastSquares) -> float:
     return _long_run_variance(digest, fit) / fit.residual_variance * digest.design.row_ms / 2
 
 
+def rows_apart(correlation_ms: float, row_ms: float) -> float:
+    """How many rows are worth one independent row where the residual has a correlation time."""
+    return max(1.0, 2 * correlation_ms / row_ms)
+
+
 def noise_log_sd(digest: VoltageDigest, fit: LeastSquares) -> tuple[float, float]:
     """Log of the residual's sd in mV, and the jackknife error of that log over units."""
     residual = residual_vectors(digest, fit)

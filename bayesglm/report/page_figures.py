@@ -8,12 +8,12 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from bayesglm.checks.residuals import EVENT_SDS, residual_moments
+from bayesglm.inference.diagnose import PRIOR_SHARE_LIMIT
 from bayesglm.inference.results import Band, CellFit
 from bayesglm.report.influence_figures import most_influential
 from bayesglm.report.kernel_figures import drawn_kernels
 from bayesglm.report.predicted import centred_residuals, predict_sweeps
 from bayesglm.report.residual_figures import moments_in_words
-from bayesglm.report.sampler_figures import PRIOR_SHARE_LIMIT
 from bayesglm.report.trace_figures import representative_sweeps
 from bayesglm.report.wording import count, decimals, percent, with_unit
 

@@ -15,6 +15,7 @@ from matplotlib.ticker import NullLocator
 from scipy.stats import gamma, halfnorm, norm, rankdata
 
 from bayesglm.features import resistance_row
+from bayesglm.inference.diagnose import PRIOR_SHARE_LIMIT
 from bayesglm.inference.results import Band, CellFit
 from bayesglm.recording.recording import FloatArray
 from bayesglm.recording.wording import fixed, minus
@@ -33,8 +34,6 @@ from bayesglm.report.style import (
     panels,
 )
 
-#: Beyond this share of the prior's sd a kernel is set by the prior.
-PRIOR_SHARE_LIMIT: Final = 0.8
 _SIGNS: Final = {"input": "κ", "after_spike": "η"}
 _UNITS: Final = {"input": "MΩ/ms", "after_spike": "mV"}
 _PRIOR_LINE: Final = (0, (1, 1.5))

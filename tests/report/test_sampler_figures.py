@@ -9,12 +9,10 @@ import pytest
 from drawn import histogram_of, x_of, y_of
 from scipy import integrate, stats
 
-from bayesglm.inference import diagnose
 from bayesglm.inference.bands import kernel_rows
 from bayesglm.inference.results import CellFit
 from bayesglm.report import sampler_figures
 from bayesglm.report.sampler_figures import (
-    PRIOR_SHARE_LIMIT,
     Scalar,
     draw_prior_posterior,
     draw_trace_rank,
@@ -25,10 +23,6 @@ from bayesglm.report.sampler_figures import (
 )
 
 pytestmark = pytest.mark.usefixtures("styled")
-
-
-def test_the_limit_is_that_of_the_check() -> None:
-    assert diagnose._PRIOR_SHARE_LIMIT == PRIOR_SHARE_LIMIT
 
 
 def test_hyperparameters_have_their_draws_and_priors(fit: CellFit) -> None:
