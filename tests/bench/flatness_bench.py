@@ -15,6 +15,7 @@ from measuring import DESIGN, SETTINGS, arguments, recording, seconds, table
 from threadpoolctl import threadpool_limits
 
 from bayesglm.fitting.run import fit
+from bayesglm.inference.setup import nominal_unit_ms
 from bayesglm.likelihood.voltage import voltage_digest
 
 LIMIT = 10.5
@@ -30,8 +31,12 @@ def main() -> int:
     for n in sizes:
         made = recording(n)
         with threadpool_limits(1, user_api="blas"):
-            voltage_digest((made,), DESIGN, 1000.0)
-            digest, _ = seconds(lambda made=made: voltage_digest((made,), DESIGN, 1000.0).gram, 2)
+            # In blocks as long as those of a fit, which makes at most 200.
+            unit_ms = nominal_unit_ms((made,), SETTINGS)
+            voltage_digest((made,), DESIGN, unit_ms)
+            digest, _ = seconds(
+                lambda made=made, ms=unit_ms: voltage_digest((made,), DESIGN, ms).sums, 2
+            )
         start = time.perf_counter()
         stages = fit(made, SETTINGS).verdict.seconds
         whole = time.perf_counter() - start
