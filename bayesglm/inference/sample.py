@@ -96,6 +96,18 @@ def nuts(
     return chains
 
 
+def prepared(model: Callable[..., None], data: Any, key: jax.Array) -> Any:
+    """NumPyro's potential, transforms and place at the prior median of a model; for `jit`."""
+    return initialize_model(
+        key,
+        model,
+        model_args=(data,),
+        dynamic_args=True,
+        init_strategy=init_to_median,
+        validate_grad=False,
+    )
+
+
 def _run_chains(
     model: Callable[..., None],
     data: Any,
@@ -128,14 +140,7 @@ def _compiled_run(
 ) -> tuple[Any, ...]:
     def run_chain(key: jax.Array) -> tuple[Any, ...]:
         start_key, run_key = jax.random.split(key)
-        info = initialize_model(
-            start_key,
-            model,
-            model_args=(data,),
-            dynamic_args=True,
-            init_strategy=init_to_median,
-            validate_grad=False,
-        )
+        info = prepared(model, data, start_key)
         init, step = hmc(potential_fn_gen=info.potential_fn, algo="NUTS")
         # Chains start dispersed around the prior median, so that R̂ means something.
         start = jax.tree.map(

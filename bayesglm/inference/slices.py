@@ -17,11 +17,9 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 from jax.flatten_util import ravel_pytree
-from numpyro.infer.initialization import init_to_median
-from numpyro.infer.util import initialize_model
 
 from bayesglm import backend as backend
-from bayesglm.inference.sample import Chains
+from bayesglm.inference.sample import Chains, prepared
 from bayesglm.recording.settings import SamplingSection
 
 #: Width of the first bracket, in unconstrained coordinates: logarithms of sds, logits of time
@@ -73,14 +71,7 @@ def _compiled_run(
 ) -> tuple[Any, ...]:
     def run_chain(key: jax.Array) -> tuple[Any, ...]:
         start_key, run_key = jax.random.split(key)
-        info = initialize_model(
-            start_key,
-            model,
-            model_args=(data,),
-            dynamic_args=True,
-            init_strategy=init_to_median,
-            validate_grad=False,
-        )
+        info = prepared(model, data, start_key)
         potential = info.potential_fn(data)
         flat, unravel = ravel_pytree(info.param_info.z)
         # Chains start dispersed around the prior median, so that R̂ means something.

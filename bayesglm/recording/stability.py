@@ -18,7 +18,7 @@ from bayesglm.recording.current import SAME_LEVEL_NA
 from bayesglm.recording.ranges import format_sweeps
 from bayesglm.recording.recording import FloatArray, IntArray, Recording
 from bayesglm.recording.settings import Settings
-from bayesglm.recording.steps import StepMeasure, StepMeasures, measure_steps
+from bayesglm.recording.steps import StepMeasure, StepMeasures
 from bayesglm.recording.wording import check_command, fit_command, fixed, sweeps_in_words
 from bayesglm.verdict import Reason
 
@@ -92,30 +92,16 @@ class Drift:
     n: int
 
 
-def measure_by_sweep(recording: Recording, level: float = 0.9) -> BySweep:
-    """Measure baseline, input resistance and series jump of each sweep.
+def by_sweep(recording: Recording, measures: StepMeasures) -> BySweep:
+    """Arrange baseline, input resistance and series jump by sweep.
 
     Parameters
     ----------
     recording
-        The recording, its spikes detected.
-    level
-        Level of intervals, as `measure_steps` takes it.
-
-    Returns
-    -------
-    BySweep
-
-    Raises
-    ------
-    InputError
-        If spikes have not been looked for.
+        The recording.
+    measures
+        From `measure_steps`.
     """
-    return by_sweep(recording, measure_steps(recording, level))
-
-
-def by_sweep(recording: Recording, measures: StepMeasures) -> BySweep:
-    """Arrange the measures of a recording's steps by sweep."""
     resistance = np.full(len(recording.sweeps), np.nan)
     recurring = _recurring(measures.steps, recording.step_ms)
     for one in recurring:

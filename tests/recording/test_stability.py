@@ -14,7 +14,7 @@ from bayesglm.recording.reading import read_recording
 from bayesglm.recording.recording import Recording
 from bayesglm.recording.settings import RecordingSection, Settings
 from bayesglm.recording.spikes import detect_spikes
-from bayesglm.recording.stability import drift_of, measure_by_sweep, stability_rows
+from bayesglm.recording.stability import BySweep, by_sweep, drift_of, stability_rows
 from bayesglm.recording.steps import measure_steps
 from bayesglm.verdict import Reason
 
@@ -25,6 +25,10 @@ def _rows(recording: Recording) -> dict[str, Reason]:
     settings = Settings()
     rows = stability_rows(recording, measure_steps(recording), settings)
     return {row.check: row for row in rows}
+
+
+def measured(recording: Recording) -> BySweep:
+    return by_sweep(recording, measure_steps(recording))
 
 
 def _drifting(change: float, n: int = 6, noise_mV: float = 0.02) -> Recording:
@@ -54,7 +58,7 @@ def test_drift_beyond_its_limit_is_a_caution(drift_mV: float, verdict: str) -> N
 
 def test_values_by_sweep_are_those_of_the_cell() -> None:
     recording = rc_recording([-100, -100, -100, 50], series_MOhm=5)
-    found = measure_by_sweep(recording)
+    found = measured(recording)
     assert found.sweeps.tolist() == [0, 1, 2, 3]
     assert found.baseline_mV == pytest.approx(np.full(4, -70.0))
     # The RC cell: 100 MΩ, and the series jump on top.
@@ -66,14 +70,14 @@ def test_values_by_sweep_are_those_of_the_cell() -> None:
 
 def test_sweeps_stand_at_their_starts_where_all_are_stated() -> None:
     recording = rc_recording([-100] * 3)
-    assert measure_by_sweep(recording).place.tolist() == [0, 1, 2]
+    assert measured(recording).place.tolist() == [0, 1, 2]
     starts = (10.0, 12.0, 40.0)
     sweeps = tuple(
         replace(sweep, start_s=start) for sweep, start in zip(recording.sweeps, starts, strict=True)
     )
-    assert measure_by_sweep(replace(recording, sweeps=sweeps)).place.tolist() == list(starts)
+    assert measured(replace(recording, sweeps=sweeps)).place.tolist() == list(starts)
     half = (replace(sweeps[0], start_s=None), *sweeps[1:])
-    assert measure_by_sweep(replace(recording, sweeps=half)).place.tolist() == [0, 1, 2]
+    assert measured(replace(recording, sweeps=half)).place.tolist() == [0, 1, 2]
 
 
 @pytest.mark.parametrize(("change", "verdict"), [(0.12, "passed"), (-0.2, "caution")])
@@ -119,7 +123,7 @@ def test_a_step_at_another_place_is_another_step() -> None:
     for shift in (500, 1000):
         current = np.roll(step_current(-100), shift)
         pairs.append((current, rc_voltage(current)))
-    found = measure_by_sweep(recording_of(pairs))
+    found = measured(recording_of(pairs))
     assert np.isnan(found.resistance_MOhm).all()
     assert np.isnan(found.level_nA)
 
@@ -128,13 +132,13 @@ def test_of_steps_that_recur_as_often_the_largest_is_used() -> None:
     current = step_current(-100)
     current[8000:9500] = -0.02
     pairs = [(current, rc_voltage(current)) for _ in range(3)]
-    assert measure_by_sweep(recording_of(pairs)).level_nA == pytest.approx(-0.1)
+    assert measured(recording_of(pairs)).level_nA == pytest.approx(-0.1)
 
 
 def test_drift_is_the_line_of_least_squares_with_its_t_interval() -> None:
     recording = rc_recording([-100] * 5)
     values = np.array([1.0, np.nan, 1.5, 2.5, 2.0])
-    drift = drift_of(measure_by_sweep(recording), values, level=0.8)
+    drift = drift_of(measured(recording), values, level=0.8)
     assert drift is not None
     slope, intercept = np.polyfit([0, 2, 3, 4], values[np.isfinite(values)], 1)
     assert (drift.slope, drift.intercept) == pytest.approx((slope, intercept))
@@ -144,7 +148,7 @@ def test_drift_is_the_line_of_least_squares_with_its_t_interval() -> None:
     error = np.sqrt(residual @ residual / 2 / np.sum((x - x.mean()) ** 2))
     half = stats.t.ppf(0.9, 2) * 4 * error
     assert (drift.lower, drift.upper) == pytest.approx((4 * slope - half, 4 * slope + half))
-    assert drift_of(measure_by_sweep(recording), np.array([1, 2, np.nan, np.nan, np.nan])) is None
+    assert drift_of(measured(recording), np.array([1, 2, np.nan, np.nan, np.nan])) is None
 
 
 def test_the_real_cell_by_hand() -> None:
@@ -156,7 +160,7 @@ def test_the_real_cell_by_hand() -> None:
         (s.voltage[stop - 2000 : stop].mean() - s.voltage[start - 1000 : start].mean()) / -0.1
         for s in recording.sweeps[1:6]
     ]
-    found = measure_by_sweep(recording)
+    found = measured(recording)
     assert found.resistance_MOhm[1:6] == pytest.approx(byhand, abs=0.05)
     assert np.isnan(found.resistance_MOhm[[0, *range(6, 17)]]).all()
     slope, _ = np.polyfit(np.arange(5), byhand, 1)
